@@ -1,0 +1,361 @@
+"""A leg: the orbit from a pivot (turning point or start) onward in one direction of time.
+
+Pieces are added as they are needed.  A leg ends at another turning point, winds onto a circle,
+reaches a horizon where the chart stops, runs to infinity, or falls to ``r = 0``.
+"""
+
+from __future__ import annotations
+
+from bisect import bisect_left
+from dataclasses import dataclass, field
+from enum import Enum
+
+from flint import arb
+
+from truefall.reference.exact.approach import Approach
+from truefall.reference.exact.disc import TooSmall
+from truefall.reference.exact.field import to_ball
+from truefall.reference.exact.flow import CLOCKS, Flow
+from truefall.reference.exact.segment import NotCovered, Point, Taylor
+
+__all__ = ["BeyondEnd", "Leg", "LegEnd", "Place"]
+
+_MAX_PIECES = 40_000
+#: Share of a piece's half-width at which the next one takes over.
+_HANDOVER = 0.96875
+_HALVINGS = 60
+_TRIES = (0.85, 0.6, 0.35, 0.15, 0.0)
+
+
+class LegEnd(Enum):
+    """Where a leg leads."""
+
+    TURN = "turning point"
+    CIRCLE = "unstable circle"
+    HORIZON = "horizon that the chart's time never reaches"
+    INFINITY = "infinity"
+    CENTRE = "r = 0"
+
+
+class BeyondEnd(ArithmeticError):
+    """The clock never shows that value on this leg; ``time`` encloses its last reading."""
+
+    def __init__(self, time: arb, end: LegEnd) -> None:
+        super().__init__(end.value)
+        self.time, self.end = time, end
+
+
+@dataclass
+class _Joint:
+    """A piece with the readings that make it continue its predecessor."""
+
+    piece: Taylor | Approach
+    y: arb
+    clocks: dict[str, arb]
+    last: arb  # parameter at which the next piece takes over
+    right: dict[str, arb] = field(default_factory=dict)
+
+
+@dataclass(frozen=True)
+class Place:
+    """A point of a leg: state, Mino distance from the pivot, readings of both clocks."""
+
+    point: Point
+    y: arb
+    clocks: dict[str, arb]
+    at_horizon: bool
+
+
+class Leg:
+    """One leg of an orbit.
+
+    Parameters
+    ----------
+    flow : Flow
+    delta : int
+        +1 into the future of the pivot, -1 into its past.
+    u, v : arb
+        The pivot; ``v = du/dy = delta w``, zero at a turning point.
+    direction : int
+        Sign of ``du/dy`` just after the pivot.
+    end : LegEnd
+    end_u : arb or None
+        Where the leg ends, for a turning point.
+    """
+
+    def __init__(
+        self,
+        flow: Flow,
+        *,
+        delta: int,
+        u: arb,
+        v: arb,
+        direction: int,
+        end: LegEnd,
+        end_u: arb | None = None,
+    ) -> None:
+        self.flow, self.delta, self.direction, self.end = flow, delta, direction, end
+        self.turning = bool(v.is_zero())
+        # w >= 0 along the leg: the forms that pass the future horizon.
+        self.regular = delta * direction > 0
+        self.closed = False
+        self.final = self._final_piece(end_u)
+        self.joints: list[_Joint] = []
+        self.rights: dict[str, list[arb]] = {name: [] for name in CLOCKS}
+        zero = {name: arb(0) for name in CLOCKS}
+        first = self._taylor(u, v)
+        self._push(first, arb(0), arb(0), zero)
+
+    def _taylor(self, u: arb, v: arb, *, at_horizon: bool = False) -> Taylor:
+        return Taylor(
+            self.flow, u, v, delta=self.delta, regular=self.regular, at_horizon=at_horizon
+        )
+
+    def _final_piece(self, end_u: arb | None) -> Taylor | Approach | None:
+        if self.end is LegEnd.TURN:
+            return self._taylor(end_u, arb(0))
+        if self.end is LegEnd.CIRCLE:
+            return Approach(
+                self.flow, delta=self.delta, side=-self.direction, regular=self.regular
+            )
+        if self.end is LegEnd.HORIZON:
+            v = self.direction * abs(self.flow.energy)
+            return self._taylor(arb(1) / 2, v, at_horizon=True)
+        return None
+
+    # -- growing -----------------------------------------------------------------------------
+    def _push(
+        self, piece: Taylor | Approach, at: arb, y: arb, clocks: dict[str, arb], *,
+        last: arb | None = None,
+    ) -> None:
+        """Append a piece whose parameter ``at`` continues the readings ``y`` and ``clocks``."""
+        joint = _Joint(
+            piece,
+            y - piece.point(at).y,
+            {name: clocks[name] - piece.clock(name, at) for name in CLOCKS},
+            self._takeover(piece) if last is None else last,
+        )
+        self.joints.append(joint)
+        if isinstance(piece, Approach):
+            return
+        for name in CLOCKS:
+            if piece.clocks[name].residue:
+                continue
+            joint.right[name] = joint.clocks[name] + piece.clock(name, joint.last)
+            self.rights[name].append(joint.right[name].mid())
+
+    def _takeover(self, piece: Taylor | Approach) -> arb:
+        """Where the next piece takes over: well inside, and before any turning point.
+
+        ``v`` has at most one zero on a piece (:meth:`Flow.limit_width`), so its sign at the far
+        end tells whether the stretch up to there is monotone.
+        """
+        if isinstance(piece, Approach):
+            return piece.h
+        last = _HANDOVER * piece.h
+        for _ in range(_HALVINGS):
+            if piece.v_at(arb(last)) * self.direction > 0:
+                return arb(last)
+            last *= 0.6
+        raise NotCovered("the piece turns back at once")
+
+    def extend(self) -> bool:
+        """Add one piece; False if the leg is complete."""
+        if self.closed:
+            return False
+        if len(self.joints) > _MAX_PIECES:
+            raise ArithmeticError("the leg needs more pieces than allowed")
+        joint = self.joints[-1]
+        piece = joint.piece
+        x_end = joint.last
+        u_join = piece.point(x_end).u.mid()
+        x_join = piece.find_u(u_join, guess=x_end)
+        y = joint.y + piece.point(x_join).y
+        clocks = {name: joint.clocks[name] + piece.clock(name, x_join) for name in CLOCKS}
+        if self.final is not None and self._join_final(u_join, y, clocks):
+            return True
+        for share in _TRIES:
+            centre = self._ahead(piece, u_join, share)
+            if centre is None:
+                continue
+            v = self.direction * self.flow.radial_potential(centre).sqrt()
+            if not v.is_finite() or v.contains(0):
+                continue
+            try:
+                follower = self._taylor(centre, v)
+                at = arb(0) if share == 0.0 else follower.find_u(u_join)
+                self._push(follower, at, y, clocks)
+            except (NotCovered, TooSmall):
+                continue
+            return True
+        raise NotCovered("no further piece could be placed")
+
+    def _ahead(self, piece: Taylor | Approach, u_join: arb, share: float) -> arb | None:
+        """An exact ``u`` some way beyond the junction, on the same monotone stretch."""
+        if share == 0.0:
+            return u_join
+        x = piece.h * (1 + share)
+        v = piece.poly_v(arb(x)).mid()
+        if not v * self.direction > 0:
+            return None
+        u = piece.poly_u(arb(x)).mid()
+        if not u > 0 or not (u - u_join) * self.direction > 0:
+            return None
+        if self.final is not None and not isinstance(self.final, Approach):
+            limit = self.final.poly_u[0].mid()
+            if not (limit - u) * self.direction > 0:
+                return None
+        return u
+
+    def _join_final(self, u: arb, y: arb, clocks: dict[str, arb]) -> bool:
+        final = self.final
+        try:
+            if isinstance(final, Approach):
+                if not final.covers_u(u):
+                    return False
+                self._push(final, final.find_u(u), y, clocks)
+            else:
+                # E = 0 meets the horizon like a turning point
+                side = -1 if final.poly_v[0].is_zero() else 0
+                at = final.find_u(u, side)
+                if not at < 0:
+                    return False
+                self._push(final, at, y, clocks, last=arb(0))
+        except NotCovered:
+            return False
+        self.closed = True
+        return True
+
+    # -- reading -----------------------------------------------------------------------------
+    def place(self, index: int, x: arb) -> Place:
+        joint = self.joints[index]
+        point = joint.piece.point(x)
+        clocks = {name: joint.clocks[name] + joint.piece.clock(name, x) for name in CLOCKS}
+        at_horizon = isinstance(joint.piece, Taylor) and joint.piece.at_horizon
+        return Place(point, joint.y + point.y, clocks, at_horizon)
+
+    def locate(self, name: str, target: arb) -> Place:
+        """The point at which a clock, counted from the pivot, shows ``target >= 0``.
+
+        Raises
+        ------
+        BeyondEnd
+            If the leg ends before.
+        """
+        rights = self.rights[name]
+        middle = target.mid()
+        for _ in range(_MAX_PIECES):
+            if rights and middle <= rights[-1]:
+                break
+            if len(rights) < len(self.joints):  # the last piece runs on for ever in this clock
+                break
+            if self.end is LegEnd.CENTRE:
+                self._check_centre(name, target)
+            if not self.extend():
+                self._refuse_or_edge(name, target)
+                break
+        index = min(bisect_left(rights, middle), len(self.joints) - 1)
+        joint = self.joints[index]
+        x = joint.piece.find_clock(name, target - joint.clocks[name])
+        return self.place(index, x)
+
+    def _refuse_or_edge(self, name: str, target: arb) -> None:
+        last = self.joints[-1].right[name]
+        if self.end is LegEnd.HORIZON and not target < last:
+            raise BeyondEnd(last, self.end)
+        if target > last and self.end is not LegEnd.TURN:
+            raise BeyondEnd(last, self.end)
+
+    def _check_centre(self, name: str, target: arb) -> None:
+        """Refuse a time certainly, or to the last bit, at or after ``r = 0``."""
+        end = self._centre_time(name)
+        fine = end.rad() <= abs(end) * arb((1, -(self.flow.precision // 2)))
+        if target > end or (fine and not target < end):
+            raise BeyondEnd(end, self.end)
+
+    def _centre_time(self, name: str) -> arb:
+        """Encloses the reading at ``r = 0``: the reading here plus a bound of what is left.
+
+        For ``u >= 1`` the potential exceeds ``L^2 u^3``, ``E^2`` and, for massive particles,
+        ``u``; the rates are bounded term by term with ``|1 - 2u| >= u``.
+        """
+        joint = self.joints[-1]
+        u = joint.piece.point(joint.last).u.lower()
+        reading = joint.right[name]
+        if not u >= 1:
+            return reading + arb(0).union(arb("inf"))
+        root = u.sqrt()
+        if name == "tau":
+            options = []
+            if self.flow.mu:
+                options.append(arb(2) / 3 / (u * root))
+            if not self.flow.momentum.contains(0):
+                options.append(arb(2) / 5 / (self.flow.momentum * u * u * root))
+            if not self.flow.mu:
+                options.append(1 / (abs(self.flow.energy) * u))
+            rest = min(options, key=lambda b: float(b.upper()) if float(b) < 1e300 else 1e301)
+        elif self.flow.chart == "kerr-schild":
+            rest = 2 / u + 1 / (2 * u * u)
+        elif self.flow.chart == "painleve-gullstrand":
+            rest = 1 / (2 * u * u) + arb(2).sqrt() * 2 / 3 / (u * root)
+        else:
+            rest = 1 / (u * u)
+        return reading + arb(0).union(rest.upper())
+
+    def end_reading(self, name: str) -> arb | None:
+        """The clock's reading where the leg ends, or None if it never ends in this clock."""
+        if self.end is LegEnd.HORIZON:
+            self.complete()
+            return self.joints[-1].right.get(name)
+        if self.end is not LegEnd.CENTRE:
+            return None
+        goal = arb((1, -min(self.flow.precision // 2, 150)))
+        for _ in range(_MAX_PIECES):
+            end = self._centre_time(name)
+            if end.is_finite() and end.rad() <= abs(end) * goal:
+                return end
+            self.extend()
+        raise ArithmeticError("the end at r = 0 could not be enclosed")
+
+    def complete(self) -> None:
+        """Grow the leg to its final piece (legs that end at a turning point or a horizon)."""
+        for _ in range(_MAX_PIECES):
+            if not self.extend():
+                return
+
+    def find_start(self, delta: int) -> Place:
+        """The place of the orbit's start on a leg that begins at a turning point.
+
+        ``delta`` is the direction of time in which the start follows the pivot; a leg of a
+        static chart serves both.
+        """
+        u0, flow = self.flow.u0, self.flow
+        for _ in range(_MAX_PIECES):
+            joint = self.joints[-1]
+            if isinstance(joint.piece, Approach) or self.closed:
+                break
+            beyond = (joint.piece.point(joint.last).u - u0) * self.direction
+            if beyond > 0:
+                break
+            self.extend()
+        index = len(self.joints) - 1
+        piece = self.joints[index].piece
+        if isinstance(piece, Approach):
+            offset = to_ball(flow.motion.inverse_radius - flow.motion.double_root)
+            return self.place(index, piece.find_u(u0, offset))
+        v0 = delta * flow.w0
+        # Near a turning point v pins the place down, elsewhere u does.
+        bend = abs(flow.slope(u0))
+        if (v0 * v0).mid() < (bend * u0).mid() / 64 and not bend.contains(0):
+            place = self.place(index, piece.find_v(v0))
+            if place.point.u.overlaps(u0):
+                return place
+        side = 0
+        if index == 0 and self.turning:
+            side = 1
+        elif self.end is LegEnd.TURN and self.closed:
+            side = -1
+        place = self.place(index, piece.find_u(u0, side))
+        if not place.point.v.overlaps(v0):
+            raise NotCovered("the start was found on the wrong side of a turning point")
+        return place

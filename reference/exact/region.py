@@ -1,0 +1,173 @@
+"""Which stretch of radius an orbit lives on, what bounds it, and what it is called."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from enum import Enum
+
+from flint import arb, arb_poly
+
+from truefall.reference.exact.field import is_zero, sign, to_ball
+from truefall.reference.exact.flow import Flow
+
+__all__ = ["Border", "MoreBits", "Region", "find_region"]
+
+
+class MoreBits(ArithmeticError):
+    """The working precision does not settle the question; try again with more."""
+
+
+class Border(Enum):
+    """What bounds the stretch of ``u = 1/r`` that the orbit moves on."""
+
+    TURN = "turning point"
+    CIRCLE = "unstable circle"
+    INFINITY = "infinity"
+    HOLE = "the hole"
+    EDGE = "past edge of the ingoing chart"
+
+
+@dataclass(frozen=True)
+class Region:
+    """Borders towards smaller and larger ``u``, turning points as balls, and the class."""
+
+    lower: Border
+    upper: Border
+    lower_u: arb | None
+    upper_u: arb | None
+    name: str
+
+
+def _refined(poly: arb_poly, slope: arb_poly, box: arb, precision: int) -> arb:
+    """Sharpen an isolating enclosure of a simple real root to the working precision."""
+    x = box.mid()
+    for _ in range(12 + precision.bit_length()):
+        step = (poly(x) / slope(x)).mid()
+        x = (x - step).mid()
+        if abs(step) <= abs(x) * arb((1, -precision)):
+            break
+    spread = (4 * abs(poly(x) / slope(x)).upper() + abs(x) * arb((1, -precision))).upper()
+    ball = x + spread * arb(0, 1)
+    rate = slope(ball)
+    if not box.overlaps(x) or rate.contains(0):
+        raise MoreBits("a root of the radial cubic is not isolated")
+    image = x - poly(x) / rate
+    if not ball.contains(image):
+        raise MoreBits("a root of the radial cubic is not enclosed")
+    return image
+
+
+def _real_roots(flow: Flow) -> list[arb]:
+    """The simple real roots of the radial potential in ascending order."""
+    m = flow.motion
+    poly = arb_poly([flow.excess, 2 * flow.mu, -flow.momentum2, 2 * flow.momentum2])
+    try:
+        boxes = poly.complex_roots()
+    except ValueError as error:
+        raise MoreBits(str(error)) from error
+    slope = poly.derivative()
+    real = [b.real for b in boxes if b.imag.contains(0)]
+    a, c, d = 2 * m.momentum_squared, 2 * m.mu, m.energy_squared - m.mu
+    b = -m.momentum_squared
+    discriminant = (
+        18 * a * b * c * d - 4 * b * b * b * d + b * b * c * c - 4 * a * c * c * c
+        - 27 * a * a * d * d
+    )
+    if len(real) != (3 if sign(discriminant) > 0 else 1):
+        raise MoreBits("real and complex roots of the radial cubic are not told apart")
+    roots = []
+    for box in real:
+        if is_zero(d) and box.contains(0):
+            roots.append(arb(0))
+        else:
+            roots.append(_refined(poly, slope, box, flow.precision))
+    return sorted(roots, key=lambda r: r.mid())
+
+
+def _neighbours(flow: Flow, roots: list[arb]) -> tuple[arb | None, arb | None]:
+    """The turning points next to the start, below and above."""
+    u0 = flow.u0
+    lower: arb | None = None
+    upper: arb | None = None
+    if flow.motion.inward == 0:
+        hits = [k for k, r in enumerate(roots) if r.overlaps(u0)]
+        if len(hits) != 1:
+            raise MoreBits("the start's turning point is not told from the other")
+        k = hits[0]
+        others = list(roots)
+        others[k] = u0
+        if flow.slope(u0).contains(0):
+            raise MoreBits("the force at the turning point is not resolved")
+        if flow.slope(u0) > 0:
+            return u0, (others[k + 1] if k + 1 < len(others) else None)
+        return (others[k - 1] if k else None), u0
+    for root in roots:
+        if root < u0:
+            lower = root
+        elif root > u0:
+            upper = root if upper is None else upper
+        else:
+            raise MoreBits("the start is not told from a turning point")
+    return lower, upper
+
+
+def _class_name(flow: Flow, lower: Border, upper: Border) -> str:
+    if flow.momentum.is_zero():
+        return "radial"
+    if lower in (Border.CIRCLE,) or upper is Border.CIRCLE:
+        return "asymptotic" if flow.mu else "critical"
+    if lower is Border.TURN:
+        if upper is Border.TURN:
+            return "bound"
+        return "plunge" if flow.mu else "trapped"
+    if lower is Border.EDGE:
+        return "plunge"
+    return "flyby" if upper is Border.TURN else "capture"
+
+
+def _with_double_root(flow: Flow) -> tuple[Border, Border, arb | None]:
+    """Borders for constants whose cubic has a double root, all decided exactly."""
+    m = flow.motion
+    circle = m.double_root
+    third = (1 - 4 * circle) / 2
+    place = sign(m.inverse_radius - circle)
+    stable = sign(6 * circle - 1) < 0
+    if stable:
+        return Border.TURN, Border.HOLE, to_ball(third)
+    if place > 0:
+        return Border.CIRCLE, Border.HOLE, None
+    if sign(third) > 0:
+        return Border.TURN, Border.CIRCLE, to_ball(third)
+    return Border.INFINITY, Border.CIRCLE, None
+
+
+def find_region(flow: Flow) -> Region:
+    """Borders and class of the orbit.
+
+    Raises
+    ------
+    MoreBits
+        If the working precision does not separate the turning points.
+    """
+    m = flow.motion
+    lower_u: arb | None = None
+    upper_u: arb | None = None
+    if m.energy_sign <= 0:
+        lower, upper = Border.EDGE, Border.HOLE
+    elif is_zero(m.momentum_squared):
+        upper = Border.HOLE
+        bound = sign(m.energy_squared - m.mu) < 0
+        lower = Border.TURN if bound else Border.INFINITY
+        lower_u = (flow.u0 if m.inward == 0 else -flow.excess / 2) if bound else None
+    elif m.double_root is not None:
+        lower, upper, lower_u = _with_double_root(flow)
+        if m.inward == 0 and lower is Border.TURN:
+            lower_u = flow.u0
+    else:
+        lower_u, upper_u = _neighbours(flow, _real_roots(flow))
+        lower, upper = Border.TURN, Border.HOLE if upper_u is None else Border.TURN
+        if lower_u is None or not lower_u > 0:
+            if lower_u is not None and lower_u.contains(0) and not lower_u.is_zero():
+                raise MoreBits("a turning point is not told from infinity")
+            lower, lower_u = Border.INFINITY, None
+    return Region(lower, upper, lower_u, upper_u, _class_name(flow, lower, upper))
