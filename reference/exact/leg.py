@@ -9,16 +9,20 @@ from __future__ import annotations
 from bisect import bisect_left
 from dataclasses import dataclass, field
 from enum import Enum
+from typing import TypeAlias
 
 from flint import arb
 
 from truefall.reference.exact.approach import Approach
+from truefall.reference.exact.centre import Centre
 from truefall.reference.exact.disc import TooSmall
 from truefall.reference.exact.field import to_ball
 from truefall.reference.exact.flow import CLOCKS, Flow
 from truefall.reference.exact.segment import NotCovered, Point, Taylor
 
 __all__ = ["BeyondEnd", "Leg", "LegEnd", "Place"]
+
+Piece: TypeAlias = "Taylor | Approach | Centre"
 
 _MAX_PIECES = 40_000
 #: Share of a piece's half-width at which the next one takes over.
@@ -49,7 +53,7 @@ class BeyondEnd(ArithmeticError):
 class _Joint:
     """A piece with the readings that make it continue its predecessor."""
 
-    piece: Taylor | Approach
+    piece: Piece
     y: arb
     clocks: dict[str, arb]
     last: arb  # parameter at which the next piece takes over
@@ -111,13 +115,15 @@ class Leg:
             self.flow, u, v, delta=self.delta, regular=self.regular, at_horizon=at_horizon
         )
 
-    def _final_piece(self, end_u: arb | None) -> Taylor | Approach | None:
+    def _final_piece(self, end_u: arb | None) -> Piece | None:
         if self.end is LegEnd.TURN:
             return self._taylor(end_u, arb(0))
         if self.end is LegEnd.CIRCLE:
             return Approach(
                 self.flow, delta=self.delta, side=-self.direction, regular=self.regular
             )
+        if self.end is LegEnd.CENTRE:
+            return Centre(self.flow)
         if self.end is LegEnd.HORIZON:
             v = self.direction * abs(self.flow.energy)
             return self._taylor(arb(1) / 2, v, at_horizon=True)
@@ -125,7 +131,7 @@ class Leg:
 
     # -- growing -----------------------------------------------------------------------------
     def _push(
-        self, piece: Taylor | Approach, at: arb, y: arb, clocks: dict[str, arb], *,
+        self, piece: Piece, at: arb, y: arb, clocks: dict[str, arb], *,
         last: arb | None = None,
     ) -> None:
         """Append a piece whose parameter ``at`` continues the readings ``y`` and ``clocks``."""
@@ -139,19 +145,19 @@ class Leg:
         if isinstance(piece, Approach):
             return
         for name in CLOCKS:
-            if piece.clocks[name].residue:
+            if isinstance(piece, Taylor) and piece.clocks[name].residue:
                 continue
             joint.right[name] = joint.clocks[name] + piece.clock(name, joint.last)
             self.rights[name].append(joint.right[name].mid())
 
-    def _takeover(self, piece: Taylor | Approach) -> arb:
+    def _takeover(self, piece: Piece) -> arb:
         """Where the next piece takes over: well inside, and before any turning point.
 
         ``v`` has at most one zero on a piece (:meth:`Flow.limit_width`), so its sign at the far
         end tells whether the stretch up to there is monotone.
         """
-        if isinstance(piece, Approach):
-            return piece.h
+        if not isinstance(piece, Taylor):
+            return arb(piece.h)
         last = _HANDOVER * piece.h
         for _ in range(_HALVINGS):
             if piece.v_at(arb(last)) * self.direction > 0:
@@ -190,7 +196,7 @@ class Leg:
             return True
         raise NotCovered("no further piece could be placed")
 
-    def _ahead(self, piece: Taylor | Approach, u_join: arb, share: float) -> arb | None:
+    def _ahead(self, piece: Piece, u_join: arb, share: float) -> arb | None:
         """An exact ``u`` some way beyond the junction, on the same monotone stretch."""
         if share == 0.0:
             return u_join
@@ -201,7 +207,7 @@ class Leg:
         u = piece.poly_u(arb(x)).mid()
         if not u > 0 or not (u - u_join) * self.direction > 0:
             return None
-        if self.final is not None and not isinstance(self.final, Approach):
+        if isinstance(self.final, Taylor):
             limit = self.final.poly_u[0].mid()
             if not (limit - u) * self.direction > 0:
                 return None
@@ -210,10 +216,10 @@ class Leg:
     def _join_final(self, u: arb, y: arb, clocks: dict[str, arb]) -> bool:
         final = self.final
         try:
-            if isinstance(final, Approach):
+            if not isinstance(final, Taylor):
                 if not final.covers_u(u):
                     return False
-                self._push(final, final.find_u(u), y, clocks)
+                self._push(final, final.find_u(u), y, clocks, last=arb(0))
             else:
                 # E = 0 meets the horizon like a turning point
                 side = -1 if final.poly_v[0].is_zero() else 0
@@ -249,8 +255,6 @@ class Leg:
                 break
             if len(rights) < len(self.joints):  # the last piece runs on for ever in this clock
                 break
-            if self.end is LegEnd.CENTRE:
-                self._check_centre(name, target)
             if not self.extend():
                 self._refuse_or_edge(name, target)
                 break
@@ -261,61 +265,17 @@ class Leg:
 
     def _refuse_or_edge(self, name: str, target: arb) -> None:
         last = self.joints[-1].right[name]
-        if self.end is LegEnd.HORIZON and not target < last:
+        if self.end in (LegEnd.HORIZON, LegEnd.CENTRE) and not target < last:
             raise BeyondEnd(last, self.end)
         if target > last and self.end is not LegEnd.TURN:
             raise BeyondEnd(last, self.end)
 
-    def _check_centre(self, name: str, target: arb) -> None:
-        """Refuse a time certainly, or to the last bit, at or after ``r = 0``."""
-        end = self._centre_time(name)
-        fine = end.rad() <= abs(end) * arb((1, -(self.flow.precision // 2)))
-        if target > end or (fine and not target < end):
-            raise BeyondEnd(end, self.end)
-
-    def _centre_time(self, name: str) -> arb:
-        """Encloses the reading at ``r = 0``: the reading here plus a bound of what is left.
-
-        For ``u >= 1`` the potential exceeds ``L^2 u^3``, ``E^2`` and, for massive particles,
-        ``u``; the rates are bounded term by term with ``|1 - 2u| >= u``.
-        """
-        joint = self.joints[-1]
-        u = joint.piece.point(joint.last).u.lower()
-        reading = joint.right[name]
-        if not u >= 1:
-            return reading + arb(0).union(arb("inf"))
-        root = u.sqrt()
-        if name == "tau":
-            options = []
-            if self.flow.mu:
-                options.append(arb(2) / 3 / (u * root))
-            if not self.flow.momentum.contains(0):
-                options.append(arb(2) / 5 / (self.flow.momentum * u * u * root))
-            if not self.flow.mu:
-                options.append(1 / (abs(self.flow.energy) * u))
-            rest = min(options, key=lambda b: float(b.upper()) if float(b) < 1e300 else 1e301)
-        elif self.flow.chart == "kerr-schild":
-            rest = 2 / u + 1 / (2 * u * u)
-        elif self.flow.chart == "painleve-gullstrand":
-            rest = 1 / (2 * u * u) + arb(2).sqrt() * 2 / 3 / (u * root)
-        else:
-            rest = 1 / (u * u)
-        return reading + arb(0).union(rest.upper())
-
     def end_reading(self, name: str) -> arb | None:
         """The clock's reading where the leg ends, or None if it never ends in this clock."""
-        if self.end is LegEnd.HORIZON:
-            self.complete()
-            return self.joints[-1].right.get(name)
-        if self.end is not LegEnd.CENTRE:
+        if self.end not in (LegEnd.HORIZON, LegEnd.CENTRE):
             return None
-        goal = arb((1, -min(self.flow.precision // 2, 150)))
-        for _ in range(_MAX_PIECES):
-            end = self._centre_time(name)
-            if end.is_finite() and end.rad() <= abs(end) * goal:
-                return end
-            self.extend()
-        raise ArithmeticError("the end at r = 0 could not be enclosed")
+        self.complete()
+        return self.joints[-1].right.get(name)
 
     def complete(self) -> None:
         """Grow the leg to its final piece (legs that end at a turning point or a horizon)."""
@@ -340,6 +300,8 @@ class Leg:
             self.extend()
         index = len(self.joints) - 1
         piece = self.joints[index].piece
+        if isinstance(piece, Centre):
+            raise NotCovered("the start lies too close to the centre")
         if isinstance(piece, Approach):
             offset = to_ball(flow.motion.inverse_radius - flow.motion.double_root)
             return self.place(index, piece.find_u(u0, offset))
