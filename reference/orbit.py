@@ -5,18 +5,26 @@ from __future__ import annotations
 from collections.abc import Sequence
 from fractions import Fraction
 from functools import cached_property
-from math import isfinite
 
 import numpy as np
 import numpy.typing as npt
 from flint import arb, fmpq
 
-from truefall.reference.exact.disc import TooSmall, working
-from truefall.reference.exact.frame import ElementsFrame, Frame, StartFrame, chart_state
+from truefall.reference.declaration import (
+    CHARTS,
+    CLOCKS,
+    PARTICLES,
+    SYSTEMS,
+    choice,
+    finite_number,
+    rational,
+    three_numbers,
+)
+from truefall.reference.enclosure import Enclosure, Sample
+from truefall.reference.exact.disc import working
+from truefall.reference.exact.frame import ElementsFrame, StartFrame
 from truefall.reference.exact.leg import LegEnd
-from truefall.reference.exact.rounding import Rounded, ball_to_float, round_ball
-from truefall.reference.exact.segment import NotCovered
-from truefall.reference.exact.solution import BeyondEnd, Instant, MoreBits, Solution
+from truefall.reference.exact.rounding import ball_to_float
 from truefall.reference.exact.start import (
     INGOING,
     Motion,
@@ -27,44 +35,6 @@ from truefall.reference.exact.start import (
 from truefall.reference.states import Bounded, End, EndReached, Floats, States
 
 __all__ = ["CHARTS", "CLOCKS", "PARTICLES", "SYSTEMS", "Orbit"]
-
-#: Exact speed of light in each system's units (BIPM, SI brochure, 9th edition 2019).
-SYSTEMS = {
-    "geometric": Fraction(1),
-    "SI": Fraction(299_792_458),
-    "astronomical": Fraction(299_792_458, 1000),
-}
-CHARTS = ("areal", "isotropic", "harmonic", *INGOING)
-PARTICLES = ("massive", "light")
-CLOCKS = ("coordinate", "proper")
-
-_PRECISIONS = (256, 384, 640, 1024, 2048, 4096, 8192)
-_TIE_BITS = 400  # a ball this tight that still straddles a rounding boundary is a tie
-_RETRY = (MoreBits, NotCovered, TooSmall)
-
-
-def _choice(value: str, allowed: Sequence[str], key: str) -> str:
-    if value not in allowed:
-        raise StartError(f"{key} is {value!r}; allowed are {', '.join(allowed)}", key)
-    return value
-
-
-def _number(value: object, key: str) -> float:
-    try:
-        number = float(value)  # type: ignore[arg-type]
-    except (TypeError, ValueError):
-        raise StartError(f"{key} must be a number, not {value!r}", key) from None
-    if not isfinite(number):
-        raise StartError(f"{key} must be finite, not {number}", key)
-    return number
-
-
-def _triple(values: object, key: str) -> tuple[float, float, float]:
-    items = list(values) if not isinstance(values, str) else []  # type: ignore[call-overload]
-    if len(items) != 3:
-        raise StartError(f"{key} must hold three numbers", key)
-    a, b, c = (_number(v, key) for v in items)
-    return a, b, c
 
 
 class Orbit:
@@ -111,12 +81,12 @@ class Orbit:
         start_time: float = 0.0,
     ) -> None:
         self._declare(system, gm, particle, chart, clock, start_time)
-        self.position = _triple(position, "start.position")
-        self.velocity = _triple(velocity, "start.velocity")
+        self.position: tuple[float, ...] = three_numbers(position, "start.position")
+        self.velocity: tuple[float, ...] = three_numbers(velocity, "start.velocity")
         place = tuple(Fraction(x) / self._length for x in self.position)
         speed = tuple(Fraction(v) / self._c for v in self.velocity)
-        self._motion: Motion = motion_from_start(particle, chart, place, speed)
-        self._frame: StartFrame | ElementsFrame = StartFrame(place, speed)
+        motion = motion_from_start(particle, chart, place, speed)
+        self._enclose(motion, StartFrame(place, speed))
 
     @classmethod
     def from_elements(
@@ -160,10 +130,10 @@ class Orbit:
         names = ("semilatus_rectum", "eccentricity", "inclination", "node", "periapsis", "anomaly")
         given = (semilatus_rectum, eccentricity, inclination, node, periapsis, anomaly)
         p, e, tilt, ascending, argument, chi = (
-            Fraction(_number(v, f"start.{n}")) for n, v in zip(names, given, strict=True)
+            Fraction(finite_number(v, f"start.{n}")) for n, v in zip(names, given, strict=True)
         )
-        orbit._motion = motion_from_elements(p / orbit._length, e, chi)
-        orbit._frame = ElementsFrame(tilt, ascending, argument + chi)
+        motion = motion_from_elements(p / orbit._length, e, chi)
+        orbit._enclose(motion, ElementsFrame(tilt, ascending, argument + chi))
         start = orbit.at([start_time])
         orbit.position = tuple(float(x) for x in start.position[0])
         orbit.velocity = tuple(float(v) for v in start.velocity[0])
@@ -172,12 +142,12 @@ class Orbit:
     def _declare(
         self, system: str, gm: float, particle: str, chart: str, clock: str, start_time: float
     ) -> None:
-        self.system = _choice(system, tuple(SYSTEMS), "system")
-        self.particle = _choice(particle, PARTICLES, "particle")
-        self.chart = _choice(chart, CHARTS, "chart")
-        self.clock = _choice(clock, CLOCKS, "clock")
-        self.gm = _number(gm, "gm")
-        self.start_time = _number(start_time, "start.time")
+        self.system = choice(system, tuple(SYSTEMS), "system")
+        self.particle = choice(particle, PARTICLES, "particle")
+        self.chart = choice(chart, CHARTS, "chart")
+        self.clock = choice(clock, CLOCKS, "clock")
+        self.gm = finite_number(gm, "gm")
+        self.start_time = finite_number(start_time, "start.time")
         if not self.gm > 0:
             raise StartError(f"gm must be positive, not {self.gm!r}", "gm")
         if system == "geometric" and self.gm != 1:
@@ -187,52 +157,18 @@ class Orbit:
                 "gm",
             )
         if particle == "light" and clock == "proper":
-            raise StartError("light has no proper time; use clock = \"coordinate\"", "clock")
+            raise StartError('light has no proper time; use clock = "coordinate"', "clock")
         self._c = SYSTEMS[system]
         self._length = Fraction(self.gm) / self._c**2
         self._time = self._length / self._c
-        self._solutions: dict[int, Solution] = {}
-        self._frames: dict[int, Frame] = {}
-        self.position: tuple[float, ...]
-        self.velocity: tuple[float, ...]
+
+    def _enclose(self, motion: Motion, frame: StartFrame | ElementsFrame) -> None:
+        self._motion = motion
+        self._enclosure = Enclosure(
+            motion, frame, self.chart, length=self._length, time=self._time, speed=self._c
+        )
 
     # -- what kind of orbit -------------------------------------------------------------------
-    def _solution(self, precision: int) -> Solution:
-        if precision not in self._solutions:
-            self._solutions[precision] = Solution(self._motion, self.chart, precision)
-            self._frames[precision] = self._frame.balls()
-        return self._solutions[precision]
-
-    def _settled(self, first: int = 256) -> tuple[int, Solution]:
-        """The solution at the lowest precision that separates its turning points."""
-        for precision in _PRECISIONS:
-            if precision < first:
-                continue
-            with working(precision):
-                try:
-                    return precision, self._solution(precision)
-                except _RETRY:
-                    continue
-        raise ArithmeticError("the orbit could not be enclosed at the highest precision")
-
-    def _bounded(self, take: str, scale: Fraction = Fraction(1)) -> Bounded | None:
-        """A constant of the orbit as float64 words, by the name of its enclosure."""
-        precision, _ = self._settled()
-        for bits in _PRECISIONS:
-            if bits < precision:
-                continue
-            with working(bits):
-                try:
-                    ball = _CONSTANTS[take](self._solution(bits))
-                except _RETRY:
-                    continue
-                if ball is None:
-                    return None
-                rounded = round_ball(ball * _q(scale))
-                if rounded.decided or bits >= 2048:
-                    return Bounded(rounded.value, rounded.low, rounded.bound)
-        raise ArithmeticError(f"{take} could not be enclosed")
-
     @cached_property
     def orbit_class(self) -> str:
         """One of the class names of the documentation (bound, plunge, flyby, ...)."""
@@ -241,7 +177,7 @@ class Orbit:
                 edge = arb(1) / 6
                 u = self._motion.start_balls()[0]
             return "circular-unstable" if u > edge else "circular-stable"
-        return self._settled()[1].region.name
+        return self._enclosure.region_name()
 
     @cached_property
     def energy(self) -> Bounded:
@@ -262,32 +198,32 @@ class Orbit:
     def angular_momentum_direction(self) -> Floats:
         """Unit vector (3,); zeros for radial motion."""
         with working(256):
-            return np.array([ball_to_float(c) for c in self._frame.momentum_direction()])
+            return np.array([ball_to_float(c) for c in self._enclosure.frame.momentum_direction()])
 
     @cached_property
     def periapsis(self) -> Bounded | None:
         """Areal radius of the inner turning point, or None."""
-        return self._bounded("periapsis", self._length)
+        return self._enclosure.constant("periapsis", self._length)
 
     @cached_property
     def apoapsis(self) -> Bounded | None:
         """Areal radius of the outer turning point, or None."""
-        return self._bounded("apoapsis", self._length)
+        return self._enclosure.constant("apoapsis", self._length)
 
     @cached_property
     def radial_period(self) -> Bounded | None:
         """Chart time from periapsis to periapsis (bound orbits), or None."""
-        return self._bounded("radial_period", self._time)
+        return self._enclosure.constant("radial_period", self._time)
 
     @cached_property
     def proper_radial_period(self) -> Bounded | None:
         """Proper time from periapsis to periapsis (bound orbits), or None."""
-        return self._bounded("proper_radial_period", self._time)
+        return self._enclosure.constant("proper_radial_period", self._time)
 
     @cached_property
     def azimuth_per_radial_period(self) -> Bounded | None:
         """Azimuth swept from periapsis to periapsis (bound orbits), radians, or None."""
-        return self._bounded("azimuth_per_radial_period")
+        return self._enclosure.constant("azimuth_per_radial_period")
 
     @cached_property
     def velocity_used(self) -> tuple[float, ...]:
@@ -297,7 +233,7 @@ class Orbit:
         return tuple(float(v) for v in self.at([self.start_time]).velocity[0])
 
     def _must(self, take: str, scale: Fraction = Fraction(1)) -> Bounded:
-        value = self._bounded(take, scale)
+        value = self._enclosure.constant(take, scale)
         if value is None:
             raise ArithmeticError(f"{take} has no value")
         return value
@@ -309,17 +245,7 @@ class Orbit:
 
     @cached_property
     def _ends(self) -> dict[int, tuple[arb, LegEnd] | None]:
-        ends: dict[int, tuple[arb, LegEnd] | None] = {}
-        for delta in (1, -1):
-            precision, _ = self._settled()
-            for bits in [b for b in _PRECISIONS if b >= precision]:
-                with working(bits):
-                    try:
-                        ends[delta] = self._solution(bits).end(self._engine_clock, delta)
-                    except _RETRY:
-                        continue
-                    break
-        return ends
+        return {delta: self._enclosure.end(self._engine_clock, delta) for delta in (1, -1)}
 
     def _end(self, delta: int) -> End | None:
         found = self._ends[delta]
@@ -327,8 +253,10 @@ class Orbit:
             return None
         reading, kind = found
         with working(512):
-            time = _q(Fraction(self.start_time)) + reading * _q(self._time)
-            radius = 0.0 if kind is LegEnd.CENTRE else ball_to_float(2 * _q(self._length))
+            time = rational(Fraction(self.start_time)) + reading * rational(self._time)
+            radius = (
+                0.0 if kind is LegEnd.CENTRE else ball_to_float(2 * arb(rational(self._length)))
+            )
         if kind is LegEnd.CENTRE:
             reason = "r = 0"
         elif self.chart in INGOING:
@@ -382,7 +310,7 @@ class Orbit:
     def _elapsed(self, time: float) -> fmpq:
         """Exact elapsed time in units of GM/c^3."""
         value = (Fraction(float(time)) - Fraction(self.start_time)) / self._time
-        return fmpq(value.numerator, value.denominator)
+        return rational(value)
 
     # -- the states -----------------------------------------------------------------------------
     def at(self, times: npt.ArrayLike, *, digits: int = 32) -> States:
@@ -408,117 +336,36 @@ class Orbit:
         inside = self.reachable(stamps)
         if not inside.all():
             index = int(np.argmin(inside))
-            after = stamps[index] >= self.start_time
-            end = self.ends_after if after else self.ends_before
+            end = self.ends_after if stamps[index] >= self.start_time else self.ends_before
             if end is None:
                 raise ArithmeticError("an orbit without an end refused a time")
             raise EndReached(end, index, float(stamps[index]))
-        rows: dict[int, list[Rounded]] = {}
-        extras: dict[int, tuple[float, float]] = {}
-        waiting = list(range(len(stamps)))
-        for precision in _PRECISIONS:
-            if not waiting:
-                break
-            waiting = self._fill(precision, stamps, waiting, digits, rows, extras)
-        if waiting:
-            raise ArithmeticError(
-                f"time {stamps[waiting[0]]!r} could not be enclosed at the highest precision"
-            )
-        return self._pack(stamps, rows, extras)
+        elapsed = [self._elapsed(t) for t in stamps]
+        return self._pack(stamps, self._enclosure.samples(self._engine_clock, elapsed, digits))
 
-    def _fill(
-        self,
-        precision: int,
-        stamps: Floats,
-        wanted: list[int],
-        digits: int,
-        rows: dict[int, list[Rounded]],
-        extras: dict[int, tuple[float, float]],
-    ) -> list[int]:
-        """Compute samples at one precision; return those that need more."""
-        left: list[int] = []
-        with working(precision):
-            try:
-                solution = self._solution(precision)
-            except _RETRY:
-                return wanted
-            tight = arb((1, -int(digits * 3.33) - 1))
-            for index in wanted:
-                try:
-                    instant = solution.at(self._engine_clock, self._elapsed(stamps[index]))
-                except _RETRY:
-                    left.append(index)
-                    continue
-                except BeyondEnd as error:
-                    # the end lies closer to this time than the enclosure of either
-                    raise ArithmeticError("a time at the very end of the orbit") from error
-                row = self._row(solution, precision, instant, tight)
-                if row is None:
-                    left.append(index)
-                    continue
-                rows[index] = row
-                extras[index] = (
-                    ball_to_float(_q(self._length) / instant.u), ball_to_float(instant.azimuth)
-                )
-        return left
-
-    def _row(
-        self, solution: Solution, precision: int, instant: Instant, tight: arb
-    ) -> list[Rounded] | None:
-        """The rounded numbers of a sample, or None if the enclosure does not settle them."""
-        position, velocity = chart_state(
-            self.chart, instant, solution.flow.momentum, self._frames[precision]
-        )
-        tau = instant.tau * _q(self._time if self._motion.mu else self._length)
-        groups = [
-            [x * _q(self._length) for x in position],
-            [v * _q(self._c) for v in velocity],
-            [tau],
-            [instant.chart * _q(self._time)],
-        ]
-        row: list[Rounded] = []
-        for group in groups:
-            size2 = sum((x * x for x in group), arb(0))
-            limit = tight * size2.sqrt().lower() if size2 > 0 else arb(0)
-            for ball in group:
-                if not ball.is_finite() or (ball.rad() > limit):
-                    return None
-                rounded = round_ball(ball)
-                tie = ball.rel_accuracy_bits() > _TIE_BITS or precision >= _PRECISIONS[-1]
-                if not (rounded.decided or tie):
-                    return None
-                row.append(rounded)
-        return row
-
-    def _pack(
-        self,
-        stamps: Floats,
-        rows: dict[int, list[Rounded]],
-        extras: dict[int, tuple[float, float]],
-    ) -> States:
-        n = len(stamps)
-        values = np.array([[q.value for q in rows[k]] for k in range(n)]).reshape(n, 8)
-        lows = np.array([[q.low for q in rows[k]] for k in range(n)]).reshape(n, 8)
-        bounds = np.array([[q.bound for q in rows[k]] for k in range(n)]).reshape(n, 8)
-        more = np.array([extras[k] for k in range(n)]).reshape(n, 2)
-        massive, proper = bool(self._motion.mu), self.clock == "proper"
+    def _pack(self, stamps: Floats, samples: list[Sample]) -> States:
+        n = len(samples)
+        numbers = [(q.value, q.low, q.bound) for s in samples for q in s.numbers]
+        value, low, bound = np.array(numbers).reshape(n, 8, 3).transpose(2, 0, 1).copy()
+        azimuth = np.array([s.azimuth for s in samples])
 
         def column(k: int, wanted: bool) -> tuple[Floats | None, ...]:
             if not wanted:
                 return None, None, None
-            return values[:, k].copy(), lows[:, k].copy(), bounds[:, k].copy()
+            return value[:, k].copy(), low[:, k].copy(), bound[:, k].copy()
 
+        massive = bool(self._motion.mu)
         tau, tau_low, tau_bound = column(6, massive)
         affine, affine_low, affine_bound = column(6, not massive)
-        chart, chart_low, chart_bound = column(7, proper)
+        chart, chart_low, chart_bound = column(7, self.clock == "proper")
         return States(
             time=stamps.copy(),
-            position=values[:, :3].copy(),
-            position_low=lows[:, :3].copy(),
-            position_bound=bounds[:, :3].copy(),
-            velocity=values[:, 3:6].copy(),
-            velocity_low=lows[:, 3:6].copy(),
-            velocity_bound=bounds[:, 3:6].copy(),
+            position=value[:, :3].copy(),
+            position_low=low[:, :3].copy(),
+            position_bound=bound[:, :3].copy(),
+            velocity=value[:, 3:6].copy(),
+            velocity_low=low[:, 3:6].copy(),
+            velocity_bound=bound[:, 3:6].copy(),
             proper_time=tau,
             proper_time_low=tau_low,
             proper_time_bound=tau_bound,
@@ -528,36 +375,7 @@ class Orbit:
             coordinate_time=chart,
             coordinate_time_low=chart_low,
             coordinate_time_bound=chart_bound,
-            radius=more[:, 0].copy(),
-            azimuth=more[:, 1].copy(),
-            winding=more[:, 1] / (2 * np.pi),
+            radius=np.array([s.radius for s in samples]),
+            azimuth=azimuth,
+            winding=azimuth / (2 * np.pi),
         )
-
-
-def _q(value: Fraction) -> fmpq:
-    return fmpq(value.numerator, value.denominator)
-
-
-def _turning(solution: Solution, upper: bool) -> arb | None:
-    if solution.circular:
-        return 1 / solution.flow.u0
-    u = solution.region.upper_u if upper else solution.region.lower_u
-    return None if u is None else 1 / u
-
-
-def _energy_minus_one(solution: Solution) -> arb:
-    flow = solution.flow
-    return flow.excess / (flow.energy + 1) if flow.mu else arb(0)
-
-
-#: Constants of the motion by name, each from a solution to a ball (GM = c = 1) or None.
-_CONSTANTS = {
-    "energy": lambda s: s.flow.energy,
-    "energy_minus_one": _energy_minus_one,
-    "angular_momentum": lambda s: s.flow.momentum,
-    "periapsis": lambda s: _turning(s, True),
-    "apoapsis": lambda s: _turning(s, False),
-    "radial_period": lambda s: s.period.clocks["chart"] if s.period else None,
-    "proper_radial_period": lambda s: s.period.clocks["tau"] if s.period else None,
-    "azimuth_per_radial_period": lambda s: s.flow.momentum * s.period.s if s.period else None,
-}

@@ -104,7 +104,8 @@ class Centre:
     def _value(self, name: str, z: arb) -> arb:
         poly, _, tail = self.sums[name]
         # the tail is that of the whole piece; it shrinks at least like z
-        return poly(z) + tail * (z / self.h)
+        value: arb = poly(z) + tail * (z / self.h)
+        return value
 
     def clock(self, name: str, x: arb) -> arb:
         """Reading relative to the end (negative before it)."""
@@ -148,4 +149,3 @@ class Centre:
         w = self.flow.radial_potential(u).sqrt()
         rate = self.flow.rate(name, u, w, 1 - 2 * u, regular=True)
         return rate * 2 * u / (w * z)
-

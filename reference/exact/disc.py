@@ -68,7 +68,11 @@ def _log2(ball: arb) -> float:
 
 def log2_upper(ball: arb) -> float:
     """An upper bound of ``log2 |ball|``."""
-    return _log2(ball.abs_upper()) + SLACK
+    size = ball.abs_upper()
+    value = float(size)  # the centre, to half an ulp
+    if 1e-290 < value < 1e290:
+        return log2(value) + SLACK
+    return _log2(size) + SLACK
 
 
 def log2_lower(ball: arb) -> float:

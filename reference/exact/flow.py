@@ -170,23 +170,27 @@ class Flow:
         if exact:
             limit, constant = _RADIAL_DISC, -inf
         else:
-            k = np.arange(1, n)
+            index = np.arange(1, n)
             size = log2_upper(momentum2)
-            limits = (log2(2 * (1 - _MAJORANT_SHARE)) + np.log2(k + 1.0) - logs[1:] - size) / (
-                k + 2
+            limits = (log2(2 * (1 - _MAJORANT_SHARE)) + np.log2(index + 1.0) - logs[1:] - size) / (
+                index + 2
             )
             limit = float(np.min(limits))
-            limit = min(
-                limit, 0.5 * (log2(_MAJORANT_SHARE * n * (n + 1)) - log2_upper(bend))
-            ) - SLACK
-            constant = float(np.max(logs[1:] + k * limit - np.log2(k + 1.0))) + SLACK
+            limit = (
+                min(limit, 0.5 * (log2(_MAJORANT_SHARE * n * (n + 1)) - log2_upper(bend))) - SLACK
+            )
+            constant = float(np.max(logs[1:] + index * limit - np.log2(index + 1.0))) + SLACK
         radius = limit - (0.0 if exact else 0.2)
         q = 2.0 ** (radius - limit)
         sup = float(np.logaddexp2.reduce(logs + np.arange(n) * radius)) + SLACK
-        sup_v = float(
-            np.logaddexp2.reduce(
-                logs[1:] + np.arange(n - 1) * radius + np.log2(np.arange(1, n)))
-        ) + SLACK
+        sup_v = (
+            float(
+                np.logaddexp2.reduce(
+                    logs[1:] + np.arange(n - 1) * radius + np.log2(np.arange(1, n))
+                )
+            )
+            + SLACK
+        )
         if not exact:
             tail = constant + n * (radius - limit) + log2((n + 1) / (1 - q) + q / (1 - q) ** 2)
             sup = float(np.logaddexp2(sup, tail)) + SLACK
@@ -265,4 +269,3 @@ class Flow:
         if residue is None:
             raise ArithmeticError("the residue at the horizon is not yet resolved")
         return int(residue), product.scaled(arb(1), -int(residue)).shifted(1)
-

@@ -117,11 +117,11 @@ class Leg:
 
     def _final_piece(self, end_u: arb | None) -> Piece | None:
         if self.end is LegEnd.TURN:
+            if end_u is None:
+                raise ValueError("a leg to a turning point needs that point")
             return self._taylor(end_u, arb(0))
         if self.end is LegEnd.CIRCLE:
-            return Approach(
-                self.flow, delta=self.delta, side=-self.direction, regular=self.regular
-            )
+            return Approach(self.flow, delta=self.delta, side=-self.direction, regular=self.regular)
         if self.end is LegEnd.CENTRE:
             return Centre(self.flow)
         if self.end is LegEnd.HORIZON:
@@ -131,7 +131,12 @@ class Leg:
 
     # -- growing -----------------------------------------------------------------------------
     def _push(
-        self, piece: Piece, at: arb, y: arb, clocks: dict[str, arb], *,
+        self,
+        piece: Piece,
+        at: arb,
+        y: arb,
+        clocks: dict[str, arb],
+        *,
         last: arb | None = None,
     ) -> None:
         """Append a piece whose parameter ``at`` continues the readings ``y`` and ``clocks``."""
@@ -173,12 +178,14 @@ class Leg:
             raise ArithmeticError("the leg needs more pieces than allowed")
         joint = self.joints[-1]
         piece = joint.piece
+        if not isinstance(piece, Taylor):
+            raise TypeError("only a final piece can be other than a power series")
         x_end = joint.last
         u_join = piece.point(x_end).u.mid()
         x_join = piece.find_u(u_join, guess=x_end)
         y = joint.y + piece.point(x_join).y
         clocks = {name: joint.clocks[name] + piece.clock(name, x_join) for name in CLOCKS}
-        if self.final is not None and self._join_final(u_join, y, clocks):
+        if self._join_final(u_join, y, clocks):
             return True
         for share in _TRIES:
             centre = self._ahead(piece, u_join, share)
@@ -196,7 +203,7 @@ class Leg:
             return True
         raise NotCovered("no further piece could be placed")
 
-    def _ahead(self, piece: Piece, u_join: arb, share: float) -> arb | None:
+    def _ahead(self, piece: Taylor, u_join: arb, share: float) -> arb | None:
         """An exact ``u`` some way beyond the junction, on the same monotone stretch."""
         if share == 0.0:
             return u_join
@@ -215,6 +222,8 @@ class Leg:
 
     def _join_final(self, u: arb, y: arb, clocks: dict[str, arb]) -> bool:
         final = self.final
+        if final is None:
+            return False
         try:
             if not isinstance(final, Taylor):
                 if not final.covers_u(u):
@@ -301,9 +310,12 @@ class Leg:
         index = len(self.joints) - 1
         piece = self.joints[index].piece
         if isinstance(piece, Centre):
-            raise NotCovered("the start lies too close to the centre")
+            return self.place(index, piece.find_u(u0))
+        circle = flow.motion.double_root
         if isinstance(piece, Approach):
-            offset = to_ball(flow.motion.inverse_radius - flow.motion.double_root)
+            if circle is None:
+                raise ValueError("no circle belongs to these constants")
+            offset = to_ball(flow.motion.inverse_radius - circle)
             return self.place(index, piece.find_u(u0, offset))
         v0 = delta * flow.w0
         # Near a turning point v pins the place down, elsewhere u does.

@@ -5,9 +5,9 @@ from __future__ import annotations
 from dataclasses import dataclass
 from enum import Enum
 
-from flint import arb, arb_poly
+from flint import arb, arb_poly, fmpq
 
-from truefall.reference.exact.field import is_zero, sign, to_ball
+from truefall.reference.exact.field import Exact, is_zero, sign, to_ball
 from truefall.reference.exact.flow import Flow
 
 __all__ = ["Border", "MoreBits", "Region", "find_region"]
@@ -70,7 +70,10 @@ def _real_roots(flow: Flow) -> list[arb]:
     a, c, d = 2 * m.momentum_squared, 2 * m.mu, m.energy_squared - m.mu
     b = -m.momentum_squared
     discriminant = (
-        18 * a * b * c * d - 4 * b * b * b * d + b * b * c * c - 4 * a * c * c * c
+        18 * a * b * c * d
+        - 4 * b * b * b * d
+        + b * b * c * c
+        - 4 * a * c * c * c
         - 27 * a * a * d * d
     )
     if len(real) != (3 if sign(discriminant) > 0 else 1):
@@ -129,9 +132,11 @@ def _with_double_root(flow: Flow) -> tuple[Border, Border, arb | None]:
     """Borders for constants whose cubic has a double root, all decided exactly."""
     m = flow.motion
     circle = m.double_root
-    third = (1 - 4 * circle) / 2
+    if circle is None:
+        raise ValueError("the radial cubic has no double root")
+    third: Exact = (fmpq(1) - 4 * circle) / 2
     place = sign(m.inverse_radius - circle)
-    stable = sign(6 * circle - 1) < 0
+    stable = sign(circle - fmpq(1, 6)) < 0
     if stable:
         return Border.TURN, Border.HOLE, to_ball(third)
     if place > 0:

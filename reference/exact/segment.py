@@ -13,6 +13,7 @@ potential), so that enclosures add from piece to piece and never multiply.
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 from flint import arb, arb_poly
@@ -51,7 +52,7 @@ class ClockSeries:
         return value + self.residue * abs(x).log() if self.residue else value
 
 
-def interval_newton(guess: arb, residual: arb, slope_on: object, spread: arb) -> arb:
+def interval_newton(guess: arb, residual: arb, slope_on: Callable[[arb], arb], spread: arb) -> arb:
     """Enclose the root of ``f`` near ``guess``.
 
     Parameters
@@ -72,9 +73,9 @@ def interval_newton(guess: arb, residual: arb, slope_on: object, spread: arb) ->
     """
     for _ in range(8):
         ball = guess + spread * arb(0, 1)
-        slope = slope_on(ball)  # type: ignore[operator]
+        slope = slope_on(ball)
         if not slope.contains(0):
-            image = guess - residual / slope
+            image: arb = guess - residual / slope
             if ball.contains_interior(image):
                 return image
         spread = spread * 16
@@ -114,8 +115,7 @@ class Taylor:
         if germ.exact:
             return germ.u.radius
         goal = log2_lower(germ.u.series[0]) - self.flow.accuracy
-        h = germ.limit + min(-1.0, (goal - germ.constant - 8) / germ.u.order)
-        return h
+        return germ.limit + min(-1.0, (goal - germ.constant - 8) / germ.u.order)
 
     def _reach(self, residue: int, disc: Disc) -> float:
         """log2 of the half-width on which an integrated rate keeps the flow's accuracy.
@@ -166,11 +166,11 @@ class Taylor:
         return self.step * self.flow.rate(name, u, self.delta * v, 1 - 2 * u, self.regular)
 
     # -- inversion ---------------------------------------------------------------------------
-    def _newton(self, value: object, slope: object, x: arb) -> arb:
+    def _newton(self, value: Callable[[arb], arb], slope: Callable[[arb], arb], x: arb) -> arb:
         """Newton on midpoints until the step stops shrinking; returns an exact number."""
         last = arb(10) * self.h
         for _ in range(60):
-            step = (value(x) / slope(x)).mid()  # type: ignore[operator]
+            step = (value(x) / slope(x)).mid()
             x = (x - step).mid()
             if abs(x) > 1.2 * self.h:
                 x = x.sgn() * arb(self.h)
@@ -179,8 +179,8 @@ class Taylor:
             last = abs(step)
         return x
 
-    def _certify(self, x: arb, residual: arb, slope_on: object) -> arb:
-        size = residual.abs_upper() / max(abs(slope_on(x)).abs_lower(), arb((1, -10**6)))  # type: ignore[operator]
+    def _certify(self, x: arb, residual: arb, slope_on: Callable[[arb], arb]) -> arb:
+        size = residual.abs_upper() / max(abs(slope_on(x)).abs_lower(), arb((1, -(10**6))))
         spread = (4 * size + arb((1, -self.flow.precision)) * self.h).upper()
         root = interval_newton(x, residual, slope_on, spread)
         self.require(root)

@@ -77,14 +77,12 @@ class Solution:
         else:
             at_lower = region.lower is Border.TURN and region.upper is not Border.TURN
         at_upper = region.upper is Border.TURN and not at_lower
-        if not (at_lower or at_upper):
+        pivot = region.lower_u if at_lower else region.upper_u if at_upper else None
+        if pivot is None:
             return {
-                delta: self._leg(
-                    delta, flow.u0, delta * flow.w0, delta * flow.motion.inward
-                )
+                delta: self._leg(delta, flow.u0, delta * flow.w0, delta * flow.motion.inward)
                 for delta in (1, -1)
             }
-        pivot = region.lower_u if at_lower else region.upper_u
         direction = 1 if at_lower else -1
         future = self._leg(1, pivot, arb(0), direction)
         # Static charts run the same both ways; in the ingoing ones the past leg meets the
@@ -101,9 +99,7 @@ class Solution:
         else:
             end = _BORDER_END[border]
         end_u = region.upper_u if direction > 0 else region.lower_u
-        return Leg(
-            self.flow, delta=delta, u=u, v=v, direction=direction, end=end, end_u=end_u
-        )
+        return Leg(self.flow, delta=delta, u=u, v=v, direction=direction, end=end, end_u=end_u)
 
     def _place_start(self) -> None:
         """Mino time and clock readings of the start, counted from the pivot."""
@@ -145,7 +141,7 @@ class Solution:
         turns = 0
         if self.period is not None:
             share = (reading + self.period.before[clock]) / self.period.clocks[clock]
-            turns = int(share.mid().floor().unique_fmpz())
+            turns = int(share.mid().floor().mid().fmpz())
             reading -= turns * self.period.clocks[clock]
         delta = 1 if reading.mid() >= 0 else -1
         leg = self.legs[delta]
@@ -187,9 +183,7 @@ class Solution:
         s = elapsed / rates[clock]
         shown = {n: rates[n] * s for n in rates}
         shown[clock] = elapsed
-        return Instant(
-            u, w, gap, rates["chart"], flow.momentum * s, shown["chart"], shown["tau"]
-        )
+        return Instant(u, w, gap, rates["chart"], flow.momentum * s, shown["chart"], shown["tau"])
 
     def end(self, clock: str, delta: int) -> tuple[arb, LegEnd] | None:
         """Where the orbit ends towards the future (+1) or past (-1), since the start."""

@@ -22,7 +22,7 @@ __all__ = ["INGOING", "Motion", "StartError", "motion_from_elements", "motion_fr
 #: Charts that are regular through the future horizon.
 INGOING = ("kerr-schild", "painleve-gullstrand", "eddington-finkelstein")
 
-_CENTRE = {"areal": 2, "isotropic": fmpq(1, 2), "harmonic": 1}
+_CENTRE = {"areal": fmpq(2), "isotropic": fmpq(1, 2), "harmonic": fmpq(1)}
 
 
 class StartError(ValueError):
@@ -97,8 +97,8 @@ def _kinematics(
         size = float(to_ball(rho))
         raise StartError(
             f"the position lies at or inside the horizon: its size is {size:.9g} GM/c^2, and the "
-            f"{chart} chart begins outside {float(_CENTRE[chart]):g} GM/c^2; choose an ingoing "
-            "chart (kerr-schild, painleve-gullstrand, eddington-finkelstein)",
+            f"{chart} chart begins outside {float(to_ball(_CENTRE[chart])):g} GM/c^2; choose an "
+            "ingoing chart (kerr-schild, painleve-gullstrand, eddington-finkelstein)",
             "start.position",
         )
     if chart == "isotropic":
@@ -111,9 +111,7 @@ def _kinematics(
     return radius, rdot, phidot2, int(along > 0) - int(along < 0)
 
 
-def _norm_and_energy(
-    chart: str, r: Exact, rdot: Exact, phidot2: fmpq
-) -> tuple[Exact, Exact]:
+def _norm_and_energy(chart: str, r: Exact, rdot: Exact, phidot2: fmpq) -> tuple[Exact, Exact]:
     """``q = (dtau/dT)^2`` and ``E/(dT/dtau)``, regular at the horizon in the ingoing charts."""
     f = 1 - 2 / r
     angular = r * r * phidot2
@@ -128,15 +126,16 @@ def _norm_and_energy(
     return f - rdot * rdot / f - angular, f
 
 
-def _double_root(
-    mu: int, energy2: Exact, momentum2: Exact
-) -> tuple[Exact | None, bool]:
+def _double_root(mu: int, energy2: Exact, momentum2: Exact) -> tuple[Exact | None, bool]:
     """The exact double root of the radial cubic, and whether it is a triple one."""
     if is_zero(momentum2):
         return None, False
     a, b, c, d = 2 * momentum2, -momentum2, fmpq(2 * mu), energy2 - mu
     discriminant = (
-        18 * a * b * c * d - 4 * b * b * b * d + b * b * c * c - 4 * a * c * c * c
+        18 * a * b * c * d
+        - 4 * b * b * b * d
+        + b * b * c * c
+        - 4 * a * c * c * c
         - 27 * a * a * d * d
     )
     if not is_zero(discriminant):
@@ -169,9 +168,7 @@ def _massive(chart: str, r: Exact, rdot: Exact, phidot2: fmpq) -> tuple[Exact, E
     )
 
 
-def _light(
-    chart: str, r: Exact, rdot: Exact, phidot2: fmpq
-) -> tuple[Exact, Exact, int, Exact]:
+def _light(chart: str, r: Exact, rdot: Exact, phidot2: fmpq) -> tuple[Exact, Exact, int, Exact]:
     """Constants of a ray: only the ratio of ``dr`` to ``dphi`` matters, in every chart alike.
 
     With ``E = 1``: ``1/L^2 = (du/dphi)^2 + u^2 (1 - 2u)``, and ``w = L du/dphi``.
