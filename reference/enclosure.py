@@ -152,6 +152,9 @@ class Enclosure:
         position, velocity = chart_state(
             self.chart, instant, self.solution(precision).flow.momentum, self._frames[precision]
         )
+        if instant.tau.is_zero() and instant.chart.is_zero():
+            start = self.frame.start_state(velocity, bool(self.motion.mu))
+            position, velocity = start if start is not None else (position, velocity)
         groups = [
             [x * self._length for x in position],
             [v * self._speed for v in velocity],

@@ -81,7 +81,7 @@ class OrbitSpec:
         }
         try:
             if self.elements is not None:
-                return Orbit.from_elements(**common, **self.elements)
+                return Orbit.from_elements(**{**common, **self.elements})
             if self.position is None or self.velocity is None:
                 raise InputError("the start has no position and velocity", self.path)
             return Orbit(**common, chart=self.chart, position=self.position, velocity=self.velocity)

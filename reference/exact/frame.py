@@ -30,6 +30,19 @@ class StartFrame:
         along = sum((a * b for a, b in zip(self._x, v, strict=True)), fmpq(0)) / self._x2
         self._t = [b - a * along for a, b in zip(self._x, v, strict=True)]
         self._t2 = sum((c * c for c in self._t), fmpq(0))
+        self._v = v
+
+    def start_state(self, velocity: list[arb], massive: bool) -> tuple[list[arb], list[arb]]:
+        """Position and velocity at the start itself, where zero components are exact zeros.
+
+        For light the direction is exact and its size is taken from ``velocity``.
+        """
+        position = [arb(c) for c in self._x]
+        if massive:
+            return position, [arb(c) for c in self._v]
+        size2 = sum((c * c for c in self._v), fmpq(0))
+        along = sum((a * b for a, b in zip(velocity, self._v, strict=True)), arb(0))
+        return position, [c * (along / size2) if c != 0 else arb(0) for c in self._v]
 
     def balls(self) -> Frame:
         """The frame at flint's current precision; components that vanish are exact zeros."""
@@ -50,6 +63,9 @@ class ElementsFrame:
 
     def __init__(self, inclination: Fraction, node: Fraction, argument: Fraction) -> None:
         self._angles = [fmpq(a.numerator, a.denominator) for a in (inclination, node, argument)]
+
+    def start_state(self, velocity: list[arb], massive: bool) -> None:
+        """Elements give no exact components."""
 
     def balls(self) -> Frame:
         """The frame at flint's current precision."""

@@ -108,7 +108,7 @@ def _without_samples(mapping: Mapping[str, Any]) -> dict[str, Any]:
 def _columns(series: Mapping[str, Any]) -> dict[str, Any]:
     from truefall.validate.trajectory import VECTORS
 
-    columns = {}
+    columns: dict[str, Any] = {}
     for key, values in series.items():
         if key.endswith(("_low", "_bound")):
             continue

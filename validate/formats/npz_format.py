@@ -34,13 +34,13 @@ def _load(archive: zipfile.ZipFile, info: zipfile.ZipInfo, path: Path) -> npt.ND
         raise InputError(f"array {name!r} claims more than 4 GB", path)
     with archive.open(info) as stream:
         try:
-            version = np.lib.format.read_magic(stream)  # type: ignore[no-untyped-call]
+            version = np.lib.format.read_magic(stream)
             header = (
                 np.lib.format.read_array_header_1_0
                 if version == (1, 0)
                 else np.lib.format.read_array_header_2_0
             )
-            shape, _, dtype = header(stream)  # type: ignore[no-untyped-call]
+            shape, _, dtype = header(stream)
         except ValueError as error:
             raise InputError(f"array {name!r} is not in NumPy's format: {error}", path) from None
         if dtype.hasobject:
@@ -126,7 +126,7 @@ def write_bytes(metadata: Mapping[str, Any], arrays: Mapping[str, Floats]) -> by
     with zipfile.ZipFile(out, "w", zipfile.ZIP_DEFLATED) as archive:
         for name, array in members.items():
             buffer = io.BytesIO()
-            np.lib.format.write_array(buffer, array, allow_pickle=False)  # type: ignore[no-untyped-call]
+            np.lib.format.write_array(buffer, array, allow_pickle=False)
             info = zipfile.ZipInfo(f"{name}.npy", date_time=(1980, 1, 1, 0, 0, 0))
             info.compress_type = zipfile.ZIP_DEFLATED
             archive.writestr(info, buffer.getvalue())

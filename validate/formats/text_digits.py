@@ -95,9 +95,7 @@ def column_quantisation(
     if not any(p[3] for p in parts) and len(decimals) == 1:  # fixed point
         return np.full(values.size, 0.5 * 10.0 ** -decimals.pop())
     digits = max(len(p[0]) for p in parts)
-    with np.errstate(divide="ignore"):
+    with np.errstate(divide="ignore", invalid="ignore"):
         power = np.floor(np.log10(np.abs(values)))
-    # a zero is as uncertain as the smallest entry that is none
-    power[values == 0.0] = power[values != 0.0].min() if values.any() else 0.0
     quanta: Floats = 0.5 * 10.0 ** (power - (digits - 1))
-    return quanta
+    return np.where(values == 0.0, 0.0, quanta)  # floating digits round no number to zero

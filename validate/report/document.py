@@ -1,0 +1,178 @@
+"""The JSON document of a check: plain numbers in the file's own units, null where none."""
+
+from __future__ import annotations
+
+import math
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+import numpy.typing as npt
+
+from truefall.validate.budget import RULE
+
+if TYPE_CHECKING:
+    from collections.abc import Sequence
+
+    from truefall.validate.check import CheckResult
+    from truefall.validate.compare import Drift
+
+__all__ = ["document", "error_summary", "file_object"]
+
+Floats = npt.NDArray[np.float64]
+
+
+def _plain(value: Any) -> Any:
+    """Numbers JSON can hold: no NaN, no infinity."""
+    if isinstance(value, float | np.floating):
+        return float(value) if math.isfinite(value) else None
+    if isinstance(value, dict):
+        return {k: _plain(v) for k, v in value.items()}
+    if isinstance(value, list | tuple):
+        return [_plain(v) for v in value]
+    return value
+
+
+def error_summary(values: Floats | None, time: Floats) -> dict[str, float] | None:
+    """Largest size, root mean square, and the time of the largest."""
+    if values is None or not values.size:
+        return None
+    size = np.abs(values)
+    worst = int(np.argmax(size))
+    return {
+        "max": float(size[worst]),
+        "rms": float(np.sqrt(np.mean(size**2))),
+        "at_time": float(time[worst]),
+    }
+
+
+def _orbit(result: CheckResult) -> dict[str, Any] | None:
+    orbit = result.orbit
+    if orbit is None:
+        return None
+
+    def value(name: str) -> float | None:
+        bounded = getattr(orbit, name)
+        return None if bounded is None else float(bounded.value)
+
+    return {
+        "class": orbit.orbit_class,
+        "energy": value("energy"),
+        "energy_minus_one": value("energy_minus_one"),
+        "angular_momentum": value("angular_momentum"),
+        "periapsis": value("periapsis"),
+        "apoapsis": value("apoapsis"),
+        "radial_period": value("radial_period"),
+        "azimuth_per_radial_period": value("azimuth_per_radial_period"),
+    }
+
+
+def _drift(drift: Drift | None) -> dict[str, float] | None:
+    if drift is None:
+        return None
+    return {
+        "max_drift": float(np.max(np.abs(drift.values))),
+        "slope": drift.slope,
+        "guard": float(np.max(drift.guard)),
+    }
+
+
+def _invariants(result: CheckResult) -> dict[str, Any]:
+    comparison = result.comparison
+    if comparison is None:
+        return {"energy": None, "angular_momentum": None, "norm": None}
+    momentum = _drift(comparison.angular_momentum)
+    if momentum is not None and comparison.direction is not None:
+        momentum["max_tilt"] = float(np.max(comparison.direction))
+    norm = None
+    if comparison.null is not None:
+        norm = {"max_drift": float(np.max(np.abs(comparison.null)))}
+    return {"energy": _drift(comparison.energy), "angular_momentum": momentum, "norm": norm}
+
+
+def _judged(result: CheckResult) -> list[dict[str, Any]]:
+    return [
+        {
+            "quantity": j.quantity,
+            "outcome": j.outcome,
+            "tolerance": j.tolerance,
+            "deviation": j.deviation,
+            "guard": j.guard,
+            "margin": j.margin,
+            "bound": j.bound,
+            "quantisation": j.quantisation,
+            "row": j.row + 1,
+            "time": j.time,
+            "undecided_rows": j.undecided_rows,
+            "failing_rows": j.failing_rows,
+        }
+        for j in result.judgements
+    ]
+
+
+def _ends(result: CheckResult) -> dict[str, Any]:
+    ends: dict[str, Any] = {"before": None, "after": None}
+    if result.orbit is not None:
+        for key, end in (("before", result.orbit.ends_before), ("after", result.orbit.ends_after)):
+            if end is not None:
+                ends[key] = {"time": end.time, "reason": end.reason}
+    return ends
+
+
+def file_object(result: CheckResult) -> dict[str, Any]:
+    """The object of the documentation for one trajectory."""
+    comparison = result.comparison
+    found: dict[str, Any] = {
+        "file": result.file,
+        "name": result.name,
+        "verdict": result.verdict,
+        "reason": result.reason or None,
+        "samples": len(result.trajectory) if result.trajectory is not None else 0,
+        "orbit": _orbit(result),
+        "start_from": result.start_from or None,
+        "start": None,
+    }
+    if result.orbit is not None:
+        found["start"] = {
+            "time": result.orbit.start_time,
+            "position": list(result.orbit.position),
+            "velocity": list(result.orbit.velocity_used),
+        }
+    if comparison is None:
+        found |= {"error": None, "floor": None, "reference": None, "growth": None}
+    else:
+        time = comparison.time
+        floor = result.floor
+        found["error"] = {
+            "position": error_summary(comparison.distance, time),
+            "radial": error_summary(comparison.radial, time),
+            "along": error_summary(comparison.along, time),
+            "cross": error_summary(comparison.cross, time),
+            "velocity": error_summary(comparison.velocity_error, time),
+            "clock": error_summary(comparison.clock_error, time),
+        }
+        found["floor"] = {
+            "position": floor.position if floor else None,
+            "from": floor.source if floor else None,
+            "predictable_until": floor.predictable_until if floor else None,
+        }
+        found["reference"] = {
+            "kind": result.reference,
+            "bound": float(np.max(comparison.position_bound)),
+            "certified_samples": int(time.size) if result.reference == "exact" else 0,
+        }
+        growth = result.growth
+        found["growth"] = {
+            "exponent": growth.exponent if growth else None,
+            "kind": growth.kind if growth else "none",
+        }
+    found["invariants"] = _invariants(result)
+    found |= {"rule": RULE, "judged": _judged(result), "ends": _ends(result), "findings": []}
+    plain: dict[str, Any] = _plain(found)
+    return plain
+
+
+def document(results: Sequence[CheckResult]) -> dict[str, Any]:
+    """One document for all files: the worst verdict, and an object each."""
+    from truefall.validate.check import worst_verdict
+
+    return {"verdict": worst_verdict(results), "files": [file_object(r) for r in results]}
