@@ -163,3 +163,30 @@ def render(result: CheckResult) -> str:
         lines += _floor_line(result, units)
         lines += _rule_lines(result)
     return "\n".join(lines)
+
+
+def explain_residual(result: CheckResult) -> str:
+    """The residual in plain words: which component rules it, how it grows, when it starts."""
+    comparison = result.comparison
+    if comparison is None:
+        return "  residual  there is none to describe"
+    sizes = {
+        "radial": float(abs(comparison.radial).max()),
+        "along": float(abs(comparison.along).max()),
+        "cross": float(abs(comparison.cross).max()),
+    }
+    guard = comparison.position_bound + comparison.position_quantum
+    above = comparison.distance > guard
+    if not above.any():
+        return "  residual  within what digits and reference leave open: nothing to explain"
+    leading = max(sizes, key=lambda k: sizes[k])
+    unit = units_of(result.spec.system)["time"] if result.spec else ""
+    first = float(comparison.time[int(above.argmax())])
+    share = sum(v**2 for v in sizes.values())
+    text = (
+        f"mostly {leading} ({100 * sizes[leading] ** 2 / share:.0f} % of its square), above the "
+        f"guard from time {first:.6g} {unit} on"
+    )
+    return "\n".join(
+        textwrap.wrap(text, WIDTH, initial_indent="  residual  ", subsequent_indent=" " * 12)
+    )
