@@ -11,19 +11,22 @@ from truefall.validate.compare import Expected
 from truefall.validate.errors import InputError
 
 if TYPE_CHECKING:
+    import numpy.typing as npt
+
     from truefall.reference import Orbit
     from truefall.validate.trajectory import Trajectory
 
-__all__ = ["stored_expected"]
+__all__ = ["load_stored", "stored_expected"]
 
 
-def stored_expected(path: str | Path, trajectory: Trajectory, orbit: Orbit) -> Expected:
-    """Values and bounds of a set whose time stamps match those of the trajectory exactly.
+def load_stored(path: str | Path, trajectory: Trajectory) -> Trajectory:
+    """The stored trajectory whose declarations and time stamps are exactly those given.
 
     Raises
     ------
     InputError
-        If the set holds several trajectories of other names, other stamps, or other units.
+        If the set holds several trajectories of other names, other stamps (naming the first
+        row that differs), other units, or no proven bounds.
     """
     from truefall.validate.formats import read_trajectories
 
@@ -36,7 +39,7 @@ def stored_expected(path: str | Path, trajectory: Trajectory, orbit: Orbit) -> E
     for key in ("system", "gm", "particle", "chart", "clock"):
         if chosen.metadata[key] != trajectory.metadata[key]:
             raise InputError(
-                f"has {key} = {chosen.metadata[key]!r}, but the trajectory has "
+                f"has {key} = {chosen.metadata[key]!r}, the trajectory has "
                 f"{trajectory.metadata[key]!r}",
                 path,
             )
@@ -49,28 +52,36 @@ def stored_expected(path: str | Path, trajectory: Trajectory, orbit: Orbit) -> E
             f"({len(chosen)} and {len(trajectory)} rows)",
             path,
         )
-    arrays = dict(chosen.stored.arrays) if chosen.stored is not None else {}
-    if "position_bound" not in arrays:
+    if chosen.stored is None or "position_bound" not in chosen.stored.arrays:
         raise InputError("has no position_bound: a reference must carry proven bounds", path)
-    clock_name = {"light": "affine"}.get(
-        str(chosen.metadata["particle"]),
-        "coordinate_time" if chosen.metadata["clock"] == "proper" else "proper_time",
-    )
-    clock = getattr(chosen, clock_name)
-    zeros = np.zeros_like(chosen.position)
+    return chosen
 
+
+def stored_expected(
+    stored: Trajectory, orbit: Orbit, keep: npt.NDArray[np.bool_], need_azimuth: bool
+) -> Expected:
+    """Values and bounds of the kept rows of a set; the azimuth, which no set has, if needed."""
+    arrays = stored.stored.arrays if stored.stored is not None else {}
+    clock_name = {"light": "affine"}.get(
+        str(stored.metadata["particle"]),
+        "coordinate_time" if stored.metadata["clock"] == "proper" else "proper_time",
+    )
+    clock = getattr(stored, clock_name)
+    if f"{clock_name}_bound" not in arrays:
+        clock = None
+    velocity = stored.velocity if "velocity_bound" in arrays else None
+    no_second_words = np.zeros_like(stored.position)
+    azimuth = np.full(int(keep.sum()), np.nan)
     return Expected(
-        position=chosen.position,
-        position_low=arrays.get("position_low", zeros),
-        position_bound=arrays["position_bound"],
-        velocity=chosen.velocity,
-        velocity_low=arrays.get("velocity_low", zeros),
-        velocity_bound=arrays.get("velocity_bound", zeros),
-        clock=clock,
-        clock_low=None if clock is None else arrays.get(f"{clock_name}_low", np.zeros_like(clock)),
-        clock_bound=None
-        if clock is None
-        else arrays.get(f"{clock_name}_bound", np.zeros_like(clock)),
-        azimuth=np.full(len(chosen), np.nan),
+        position=stored.position[keep],
+        position_low=arrays.get("position_low", no_second_words)[keep],
+        position_bound=arrays["position_bound"][keep],
+        velocity=None if velocity is None else velocity[keep],
+        velocity_low=arrays.get("velocity_low", no_second_words)[keep],
+        velocity_bound=None if velocity is None else arrays["velocity_bound"][keep],
+        clock=None if clock is None else clock[keep],
+        clock_low=arrays.get(f"{clock_name}_low", np.zeros(len(stored)))[keep],
+        clock_bound=None if clock is None else arrays[f"{clock_name}_bound"][keep],
+        azimuth=orbit.at(stored.time[keep]).azimuth if need_azimuth else azimuth,
         normal=orbit.angular_momentum_direction,
     )

@@ -13,12 +13,15 @@ import re
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from fractions import Fraction
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
 
 from truefall.validate.errors import InputError, UsageError
+
+if TYPE_CHECKING:
+    from truefall.validate.compare import Guard
 
 __all__ = [
     "QUANTITIES",
@@ -61,8 +64,9 @@ class Budget:
 class Judgement:
     """One quantity held against one tolerance.
 
-    ``row`` (0-based) is where the margin ``T - (d + w)`` is smallest; ``bound`` and
-    ``quantisation`` are the parts of ``guard`` there.
+    ``row`` (0-based) is where the margin ``T - (d + w)`` is smallest among the rows that made
+    the outcome; ``bound`` and ``quantisation`` are the parts of ``guard`` there.
+    ``undecided_rows`` includes the ``unjudged_rows``, which the file's digits do not determine.
     """
 
     quantity: str
@@ -76,11 +80,17 @@ class Judgement:
     time: float
     undecided_rows: int
     failing_rows: int
+    unjudged_rows: int = 0
 
     @property
     def margin(self) -> float:
         """``T - (d + w)``: positive means conforming with that much to spare."""
         return self.tolerance - (self.deviation + self.guard)
+
+    @property
+    def adequacy(self) -> float | None:
+        """``T/b``: how much finer than the tolerance the reference is; None if it is exact."""
+        return self.tolerance / self.bound if self.bound > 0 else None
 
 
 def _unit_value(text: str, kind: str, system: str, key: str) -> float:
@@ -169,6 +179,15 @@ def parse_budget(mapping: Mapping[str, Any], system: str, where: str | None = No
     return Budget(absolute, growing)
 
 
+def _looks_like_tolerance(text: str) -> bool:
+    match = _WITH_UNIT.fullmatch(text)
+    try:
+        value = float(match[1] if match else text)
+    except ValueError:
+        return False
+    return 0 < value < float("inf")
+
+
 def parse_budget_options(options: Sequence[str]) -> dict[str, Any]:
     """``position=1e-6`` options (also several in one, separated by commas) as a [budget] table.
 
@@ -191,6 +210,11 @@ def parse_budget_options(options: Sequence[str]) -> dict[str, Any]:
                     _known(inner, _PER_REVOLUTION)
             except ValueError as error:
                 raise UsageError(f"--budget: {error}") from None
+            if not _looks_like_tolerance(value):
+                raise UsageError(
+                    f"--budget {part.strip()!r}: {value!r} is neither a positive number nor one "
+                    "with a unit such as 1 mm"
+                )
             if outer == "per_revolution":
                 table.setdefault("per_revolution", {})[inner] = value
             else:
@@ -202,8 +226,7 @@ def judge(
     quantity: str,
     tolerance: Floats,
     deviation: Floats,
-    bound: Floats,
-    quantisation: Floats,
+    guard: Guard,
     time: Floats,
     judged: npt.NDArray[np.bool_],
 ) -> Judgement:
@@ -211,16 +234,17 @@ def judge(
 
     Parameters
     ----------
-    tolerance, deviation, bound, quantisation, time : (n,)
-        ``bound + quantisation`` is the guard ``w``.
+    tolerance, deviation, time : (n,)
+    guard : Guard
+        Its total is ``w``.
     judged : (n,) bool
         Samples past the time up to which the file determines the orbit are not judged: they
         count as undecided.  So does a sample that has no value (NaN).
     """
-    guard = bound + quantisation
+    w = guard.total
     with np.errstate(invalid="ignore"):
-        passes = judged & (deviation + guard <= tolerance)
-        fails = judged & (deviation - guard > tolerance)
+        passes = judged & (deviation + w <= tolerance)
+        fails = judged & (deviation - w > tolerance)
     undecided = ~passes & ~fails
     if fails.any():
         outcome, among = "fail", fails
@@ -228,20 +252,23 @@ def judge(
         outcome, among = "undecided", undecided
     else:
         outcome, among = "pass", passes
-    margin = np.where(among, tolerance - (deviation + guard), np.inf)
+    if outcome == "undecided" and (undecided & judged).any():
+        among = undecided & judged  # a row that was judged tells more than one that was not
+    margin = np.where(among, tolerance - (deviation + w), np.inf)
     row = int(np.argmin(np.nan_to_num(margin, nan=-np.inf)))
     return Judgement(
         quantity=quantity,
         outcome=outcome,
         tolerance=float(tolerance[row]),
         deviation=float(deviation[row]),
-        guard=float(guard[row]),
-        bound=float(bound[row]),
-        quantisation=float(quantisation[row]),
+        guard=float(w[row]),
+        bound=float(guard.bound[row]),
+        quantisation=float(guard.quantisation[row]),
         row=row,
         time=float(time[row]),
         undecided_rows=int(undecided.sum()),
         failing_rows=int(fails.sum()),
+        unjudged_rows=int((~judged).sum()),
     )
 
 

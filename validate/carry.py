@@ -1,88 +1,204 @@
-"""What the digits of a start leave open about the orbit later on.
+"""What the digits of a file leave open: of its start, carried along the orbit, and of its stamps.
 
-The quantisation of the start is carried along the exact orbit by the state-transition matrix,
-here by differences of exact orbits whose starts are moved by 2^-40 of their size.  Six orbits
-at a few dozen times cost less than a second; between those times the floor is interpolated.
+Both are found by differences of exact orbits.  A start is moved by half a unit of its last
+digit, component by component, and the moved orbits are followed in the place of a linearised
+transition matrix: so the spread saturates at the size of the orbit where it grows
+exponentially, instead of overflowing, and stays visible however small the half unit is.
 """
 
 from __future__ import annotations
 
-from dataclasses import replace
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
 import numpy.typing as npt
 
+from truefall.validate.errors import InputError
+
 if TYPE_CHECKING:
-    from truefall.reference import Orbit
+    from truefall.reference import Orbit, States
     from truefall.validate.orbit_file import OrbitSpec
 
-__all__ = ["carried_floor", "sensitivities"]
+__all__ = [
+    "Spread",
+    "carried_spread",
+    "end_spread",
+    "move_start",
+    "second_clock",
+    "sensitivities",
+    "stamp_spread",
+]
 
 Floats = npt.NDArray[np.float64]
 _TIMES = 64
+#: Relative step of derivatives: far above float64's 2^-53, far below what is nonlinear.
 _STEP = 2.0**-40
+#: Smallest move of a start component, in units in its last place; smaller half units scale it.
+_ULPS = 4.0
+#: Stands for "anywhere" where logarithms must stay finite.
+_ANYWHERE = 1e300
 
 
-def sensitivities(
-    spec: OrbitSpec, orbit: Orbit, times: Floats, *, velocity_too: bool = True
-) -> Floats:
+@dataclass(frozen=True)
+class Spread:
+    """How far position, velocity and second clock may lie from the expected ones, (n,) each."""
+
+    position: Floats
+    velocity: Floats
+    clock: Floats
+
+    @classmethod
+    def none(cls, n: int) -> Spread:
+        """Nothing is left open."""
+        return cls(np.zeros(n), np.zeros(n), np.zeros(n))
+
+
+def second_clock(states: States) -> tuple[Floats, Floats, Floats]:
+    """Value, second word and bound of what a trajectory is compared in as ``clock``.
+
+    Chart time on the proper clock, the affine parameter for light, proper time else.
+    """
+    for name in ("coordinate_time", "affine", "proper_time"):
+        value = getattr(states, name)
+        if value is not None:
+            return value, getattr(states, f"{name}_low"), getattr(states, f"{name}_bound")
+    raise ValueError("these states carry no second clock")
+
+
+def _difference(a: States, b: States) -> tuple[Floats, Floats, Floats]:
+    """``a - b`` in position (n, 3), velocity (n, 3) and second clock (n,), both words."""
+    clock_a, clock_b = second_clock(a), second_clock(b)
+    return (
+        (a.position - b.position) + (a.position_low - b.position_low),
+        (a.velocity - b.velocity) + (a.velocity_low - b.velocity_low),
+        (clock_a[0] - clock_b[0]) + (clock_a[1] - clock_b[1]),
+    )
+
+
+def move_start(spec: OrbitSpec, orbit: Orbit, component: int, step: float) -> tuple[Orbit, float]:
+    """The orbit whose start differs in one of six components, and by how much exactly.
+
+    Raises
+    ------
+    InputError
+        If the moved start is no orbit.
+    """
+    start = [list(orbit.position), list(orbit.velocity)]
+    vector = start[component // 3]
+    before = vector[component % 3]
+    vector[component % 3] = before + step
+    moved = replace(spec, position=tuple(start[0]), velocity=tuple(start[1]), elements=None)
+    return moved.orbit(), vector[component % 3] - before
+
+
+def sensitivities(spec: OrbitSpec, orbit: Orbit, times: Floats) -> Floats:
     """``d position(t) / d start``, (n, 3, 6): columns position, then velocity.
+
+    NaN where a moved orbit ends before.
 
     Raises
     ------
     InputError
         If a moved start is no orbit.
     """
-    position, velocity = np.array(orbit.position), np.array(orbit.velocity)
+    sizes = [float(np.linalg.norm(v)) for v in (orbit.position, orbit.velocity)]
     base = orbit.at(times)
-    columns = np.zeros((times.size, 3, 6))
+    columns = np.full((times.size, 3, 6), np.nan)
     for k in range(6):
-        if k >= 3 and not velocity_too:
-            break
-        vector = position if k < 3 else velocity
-        moved = vector.copy()
-        moved[k % 3] += _STEP * np.linalg.norm(vector)
-        step = moved[k % 3] - vector[k % 3]
-        if step == 0.0:  # a start at rest
-            step = _STEP
-            moved[k % 3] = step
-        start = (moved, velocity) if k < 3 else (position, moved)
-        other = replace(
-            spec,
-            position=tuple(start[0].tolist()),
-            velocity=tuple(start[1].tolist()),
-            elements=None,
-        ).orbit()
+        other, step = move_start(spec, orbit, k, _STEP * (sizes[k // 3] or sizes[0]))
         inside = other.reachable(times)
-        states = other.at(times[inside])
-        difference = (states.position - base.position[inside]) + (
-            states.position_low - base.position_low[inside]
-        )
-        columns[inside, :, k] = difference / step
-        columns[~inside, :, k] = np.inf
+        if inside.any():
+            here = base if inside.all() else orbit.at(times[inside])
+            columns[inside, :, k] = _difference(other.at(times[inside]), here)[0] / step
     return columns
 
 
-def carried_floor(spec: OrbitSpec, orbit: Orbit, times: Floats, quantum: Floats) -> Floats:
-    """Bound (first order) on the position error that the start's digits can cause, (n,).
+def _component_spread(
+    spec: OrbitSpec, orbit: Orbit, base: States, component: int, quantum: float
+) -> Floats:
+    """Size of the change in position, velocity, clock, (3, n), by one half unit of the start."""
+    value = (*orbit.position, *orbit.velocity)[component]
+    step = max(quantum, _ULPS * float(np.spacing(abs(value))))
+    found = np.full((3, base.time.size), _ANYWHERE)
+    try:
+        other, step = move_start(spec, orbit, component, step)
+    except InputError:  # the digits do not even tell whether there is an orbit
+        return found
+    inside = other.reachable(base.time)
+    if inside.any():
+        here = base if inside.all() else orbit.at(base.time[inside])
+        position, velocity, clock = _difference(other.at(base.time[inside]), here)
+        share = min(1.0, quantum / abs(step))
+        found[0, inside] = share * np.linalg.norm(position, axis=1)
+        found[1, inside] = share * np.linalg.norm(velocity, axis=1)
+        found[2, inside] = share * np.abs(clock)
+    return found
+
+
+def carried_spread(spec: OrbitSpec, orbit: Orbit, times: Floats, quantum: Floats) -> Spread:
+    """What the start's digits leave open about the states at ``times``, all on one side of it.
 
     Parameters
     ----------
+    times : (n,)
     quantum : (6,)
         Half units of the last digits of the start's position and velocity.
+
+    Notes
+    -----
+    At most 64 of the times are followed; between them the largest spread so far is
+    interpolated in its logarithm: an orbit does not forget.
     """
     if not np.any(quantum):
-        return np.zeros(times.size)
+        return Spread.none(times.size)
     elapsed = np.abs(times - spec.start_time)
     order = np.argsort(elapsed)
     picks = np.unique(np.linspace(0, times.size - 1, min(_TIMES, times.size)).astype(int))
     chosen = order[picks]
-    columns = sensitivities(spec, orbit, times[chosen])
-    floor = np.sum(np.linalg.norm(columns, axis=1) * quantum, axis=1)
-    # the worst so far: an orbit does not forget
-    floor = np.maximum.accumulate(floor)
-    with np.errstate(divide="ignore"):
-        logs = np.log(np.maximum(floor, 1e-300))
-    result: Floats = np.exp(np.interp(elapsed, elapsed[chosen], logs))
-    return result
+    base = orbit.at(times[chosen])
+    total = np.zeros((3, chosen.size))
+    for k in np.flatnonzero(quantum):
+        total += _component_spread(spec, orbit, base, int(k), float(quantum[k]))
+    worst = np.clip(np.maximum.accumulate(total, axis=1), 1.0 / _ANYWHERE, _ANYWHERE)
+    rows = [np.exp(np.interp(elapsed, elapsed[chosen], np.log(row))) for row in worst]
+    return Spread(*(np.where(row > 2.0 / _ANYWHERE, row, 0.0) for row in rows))
+
+
+def stamp_spread(orbit: Orbit, times: Floats, quantum: float) -> Spread:
+    """What half a unit of the time stamps' last digit does to the states: ``|v| q_t`` and so on.
+
+    By the exact orbit at moved stamps; a stamp next to the orbit's end is moved the other way.
+    """
+    if quantum <= 0:
+        return Spread.none(times.size)
+    step = np.maximum(quantum, _ULPS * np.spacing(np.abs(times)))
+    moved = times + step
+    moved = np.where(orbit.reachable(moved), moved, times - step)
+    usable = orbit.reachable(moved)
+    found = np.full((3, times.size), _ANYWHERE)
+    if usable.any():
+        position, velocity, clock = _difference(orbit.at(moved[usable]), orbit.at(times[usable]))
+        share = quantum / np.abs(moved[usable] - times[usable])
+        found[0, usable] = share * np.linalg.norm(position, axis=1)
+        found[1, usable] = share * np.linalg.norm(velocity, axis=1)
+        found[2, usable] = share * np.abs(clock)
+    return Spread(*found)
+
+
+def end_spread(spec: OrbitSpec, orbit: Orbit, quantum: Floats, after: bool) -> float:
+    """How far the end of the orbit may lie from where it is expected, as a time."""
+    end = orbit.ends_after if after else orbit.ends_before
+    if end is None or not np.any(quantum):
+        return 0.0
+    total = 0.0
+    for k in np.flatnonzero(quantum):
+        try:
+            other, _ = move_start(spec, orbit, int(k), float(quantum[k]))
+        except InputError:
+            return np.inf
+        moved = other.ends_after if after else other.ends_before
+        if moved is None:
+            return np.inf
+        total += abs(moved.time - end.time)
+    return total

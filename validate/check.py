@@ -10,10 +10,15 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 import numpy.typing as npt
 
-from truefall.validate.budget import Budget, Judgement, judge, overall, parse_budget
+from truefall.validate.against import load_stored, stored_expected
+from truefall.validate.budget import Judgement, overall, parse_budget
+from truefall.validate.carry import carried_spread, end_spread, second_clock, stamp_spread
 from truefall.validate.compare import Comparison, Expected, compare
-from truefall.validate.errors import InputError
+from truefall.validate.drift import drifts_of
+from truefall.validate.errors import InputError, UsageError
 from truefall.validate.growth import Growth, growth_of
+from truefall.validate.judging import Floor, floor_of, judgements_of, position_tolerance
+from truefall.validate.starts import find_start, quantum_of_start
 
 if TYPE_CHECKING:
     from truefall.reference import Orbit
@@ -24,16 +29,8 @@ __all__ = ["CheckResult", "Floor", "check_file", "check_trajectory", "exit_statu
 
 Floats = npt.NDArray[np.float64]
 _STATUS = {"unusable": 4, "fail": 1, "undecided": 3, "not-judged": 5, "pass": 0}
-_DEFAULT_SHARE = 0.01  # of r, for predictable_until without a position budget
-
-
-@dataclass(frozen=True)
-class Floor:
-    """Below which nothing can be said.  ``predictable_until`` is None if the end is never met."""
-
-    position: float
-    source: str
-    predictable_until: float | None
+#: What value and second word together leave open, relative to the size of the vector.
+_TWO_WORDS = 2.0**-104
 
 
 @dataclass(frozen=True)
@@ -41,7 +38,8 @@ class CheckResult:
     """Everything known about one trajectory after a check.
 
     ``verdict`` is pass, fail, undecided, not-judged or unusable; ``reason`` is the sentence
-    for a verdict that no tolerance explains.
+    for a verdict that no tolerance explains.  ``trajectory`` holds the rows that were compared
+    (those the orbit reaches), of ``samples`` in the file.
     """
 
     file: str
@@ -56,6 +54,7 @@ class CheckResult:
     judgements: tuple[Judgement, ...] = ()
     floor: Floor | None = None
     growth: Growth | None = None
+    samples: int = 0
     start_from: str = ""
     reference: str = "exact"
 
@@ -106,9 +105,16 @@ def check_file(
     -------
     list of CheckResult
         One for each trajectory; a file that cannot be used gives one "unusable" result.
+
+    Raises
+    ------
+    UsageError
+        For options that contradict each other.
     """
     from truefall.validate.formats import read_trajectories
 
+    if fit and against is not None:
+        raise UsageError("--fit finds a start, --against gives the expected values: use one")
     layer = dict(overrides or {})
     if budget:
         layer["budget"] = dict(budget)
@@ -123,36 +129,6 @@ def check_file(
         except InputError as error:
             results.append(CheckResult(str(path), trajectory.name, "unusable", str(error)))
     return results
-
-
-def _start(trajectory: Trajectory, fit: bool) -> tuple[OrbitSpec, str]:
-    """The orbit to hold the trajectory against, and where its start comes from."""
-    from truefall.validate.orbit_file import parse_orbit
-
-    spec = parse_orbit(
-        {k: v for k, v in trajectory.metadata.items() if k != "samples"},
-        trajectory.path,
-        need_start=False,
-    )
-    if fit:
-        from truefall.validate.fit import fit_start
-
-        return fit_start(spec, trajectory), "fit"
-    if spec.position is not None or spec.elements is not None:
-        return spec, "orbit file"
-    if trajectory.velocity is None:
-        raise InputError(
-            "has no velocities, so its first row is no start; give an orbit file (--orbit) or "
-            "let --fit find the start that fits best",
-            trajectory.path,
-        )
-    first = replace(
-        spec,
-        start_time=float(trajectory.time[0]),
-        position=tuple(trajectory.position[0].tolist()),
-        velocity=tuple(trajectory.velocity[0].tolist()),
-    )
-    return first, "first row"
 
 
 def _part(trajectory: Trajectory, keep: npt.NDArray[np.bool_]) -> Trajectory:
@@ -180,200 +156,157 @@ def _part(trajectory: Trajectory, keep: npt.NDArray[np.bool_]) -> Trajectory:
 
 
 def _expected(orbit: Orbit, times: Floats) -> Expected:
-    """The exact solution at the time stamps, nothing interpolated."""
+    """The exact solution at the time stamps, nothing interpolated.
+
+    The engine bounds the high word alone; value and second word together are proven to
+    2^-107 of the vector's size (32 digits), of which 2^-104 allows for the rounding of the
+    second word, and the comparison uses both.
+    """
     states = orbit.at(times)
-    if orbit.particle == "light":
-        clock = (states.affine, states.affine_low, states.affine_bound)
-    elif orbit.clock == "proper":
-        clock = (states.coordinate_time, states.coordinate_time_low, states.coordinate_time_bound)
-    else:
-        clock = (states.proper_time, states.proper_time_low, states.proper_time_bound)
+    clock, clock_low, _ = second_clock(states)
+
+    def open_by(vectors: Floats) -> Floats:
+        size = np.linalg.norm(vectors, axis=1, keepdims=True)
+        return np.broadcast_to(size * _TWO_WORDS, vectors.shape)
+
     return Expected(
         position=states.position,
         position_low=states.position_low,
-        position_bound=states.position_bound + 0.0,
+        position_bound=open_by(states.position),
         velocity=states.velocity,
         velocity_low=states.velocity_low,
-        velocity_bound=states.velocity_bound,
-        clock=clock[0],
-        clock_low=clock[1],
-        clock_bound=clock[2],
+        velocity_bound=open_by(states.velocity),
+        clock=clock,
+        clock_low=clock_low,
+        clock_bound=np.abs(clock) * _TWO_WORDS,
         azimuth=states.azimuth,
         normal=orbit.angular_momentum_direction,
     )
 
 
-def _tight(expected: Expected) -> Expected:
-    """With second words at hand what is left open is 2^-104 of the size, not half an ulp.
-
-    The engine bounds the high word alone; value and second word together are right to the
-    digits it was asked for (32), and the comparison uses both.
-    """
-    tiny = 2.0**-104
-    size = np.linalg.norm(expected.position, axis=1, keepdims=True)
-    assert expected.velocity is not None
-    speed = np.linalg.norm(expected.velocity, axis=1, keepdims=True)
-    return replace(
-        expected,
-        position_bound=np.broadcast_to(size * tiny, expected.position.shape),
-        velocity_bound=np.broadcast_to(speed * tiny, expected.velocity.shape),
-        clock_bound=None if expected.clock is None else np.abs(expected.clock) * tiny,
-    )
-
-
-def _quantum_of_start(trajectory: Trajectory, start_from: str) -> Floats:
-    if start_from != "first row":
-        return np.zeros(6)
-    q = trajectory.quantisation
-    return np.concatenate([np.atleast_2d(q.position)[0], np.atleast_2d(q.velocity)[0]])
-
-
 def check_trajectory(
     trajectory: Trajectory, *, against: str | Path | None = None, fit: bool = False
 ) -> CheckResult:
-    """Judge one trajectory; raises InputError if it cannot be judged at all."""
-    spec, start_from = _start(trajectory, fit)
-    budget = parse_budget(spec.budget, spec.system, trajectory.path)
+    """Judge one trajectory.
+
+    Raises
+    ------
+    InputError
+        If it cannot be judged at all.
+    """
+    stored = None if against is None else load_stored(against, trajectory)
+    spec, start_from = find_start(trajectory, fit=fit, stored=stored)
+    budget = parse_budget(trajectory.metadata.get("budget", {}), spec.system, trajectory.path)
     orbit = spec.orbit()
+    quantum = quantum_of_start(trajectory, start_from)
     inside = orbit.reachable(trajectory.time)
-    reason = _beyond(orbit, trajectory, inside)
+    beyond, past = _beyond(spec, orbit, trajectory, inside, quantum)
+    result = CheckResult(
+        trajectory.path, trajectory.name, beyond, past, trajectory, spec, orbit,
+        samples=len(trajectory), start_from=start_from,
+        reference="exact" if against is None else f"stored: {against}",
+    )  # fmt: skip
     if not inside.any():
-        return CheckResult(
-            trajectory.path, trajectory.name, "fail", reason, trajectory, spec, orbit,
-            start_from=start_from,
-        )  # fmt: skip
+        return result
     kept = _part(trajectory, inside)
-    if against is None:
-        expected, reference = _tight(_expected(orbit, kept.time)), "exact"
+    if stored is None:
+        expected = _expected(orbit, kept.time)
     else:
-        from truefall.validate.against import stored_expected
-
-        expected, reference = stored_expected(against, kept, orbit), f"stored: {against}"
-    carried = np.zeros(len(kept))
-    quantum = _quantum_of_start(trajectory, start_from)
-    if against is None and quantum.any():
-        from truefall.validate.carry import carried_floor
-
-        carried = carried_floor(spec, orbit, kept.time, quantum)
-    comparison = compare(
-        kept,
-        expected,
-        energy_minus_one=orbit.energy_minus_one.value,
-        momentum=orbit.angular_momentum.value,
-        carried=carried,
+        expected = stored_expected(stored, orbit, inside, bool(budget.per_revolution))
+    comparison = _compare(kept, spec, orbit, expected, quantum)
+    radius = _areal_radius(spec, expected)
+    floor, judged = floor_of(comparison, position_tolerance(comparison, budget, radius))
+    judgements = judgements_of(
+        comparison, budget, judged, trajectory.path, spec.particle == "light"
     )
-    floor, judged = _floor(comparison, expected, budget, carried)
-    judgements = _judgements(comparison, budget, judged)
-    verdict = overall(judgements)
-    if len(trajectory) == 1 and start_from == "first row":
-        verdict, reason, judgements = "not-judged", "the only row is the start itself", []
-    elif reason:
-        verdict = "fail"
-    elif verdict == "not-judged":
-        reason = "no budget was given; errors are reported all the same"
-    return CheckResult(
-        file=trajectory.path,
-        name=trajectory.name,
+    verdict, reason = _verdict(trajectory, start_from, spec, judgements, beyond, past)
+    return replace(
+        result,
         verdict=verdict,
         reason=reason,
         trajectory=kept,
-        spec=spec,
-        orbit=orbit,
         expected=expected,
         comparison=comparison,
         judgements=tuple(judgements),
         floor=floor,
         growth=growth_of(
-            kept.time,
-            comparison.distance,
-            comparison.position_bound + comparison.position_quantum,
-            spec.start_time,
+            kept.time, comparison.distance, comparison.position_guard.total, spec.start_time
         ),
-        start_from=start_from,
-        reference=reference,
     )
 
 
-def _beyond(orbit: Orbit, trajectory: Trajectory, inside: npt.NDArray[np.bool_]) -> str:
-    """The sentence for rows that lie past an end of the orbit, or nothing."""
+def _compare(
+    kept: Trajectory, spec: OrbitSpec, orbit: Orbit, expected: Expected, quantum: Floats
+) -> Comparison:
+    drifts = drifts_of(
+        kept,
+        energy_minus_one=orbit.energy_minus_one.value,
+        momentum=orbit.angular_momentum.value,
+        normal=expected.normal,
+        start_open=bool(np.any(quantum)),
+    )
+    return compare(
+        kept,
+        expected,
+        drifts=drifts,
+        stamps=stamp_spread(orbit, kept.time, kept.quantisation.time),
+        carried=carried_spread(spec, orbit, kept.time, quantum),
+    )
+
+
+def _areal_radius(spec: OrbitSpec, expected: Expected) -> Floats:
+    from truefall.reference.charts import areal_radius
+    from truefall.reference.units import length_in
+
+    length = length_in(spec.system, spec.gm)
+    return areal_radius(spec.chart, np.linalg.norm(expected.position, axis=1) / length) * length
+
+
+def _verdict(
+    trajectory: Trajectory,
+    start_from: str,
+    spec: OrbitSpec,
+    judgements: Sequence[Judgement],
+    beyond: str,
+    past: str,
+) -> tuple[str, str]:
+    """The verdict on the whole file, and the sentence for one that no tolerance explains."""
+    verdict = overall(judgements)
+    if past:
+        return ("fail" if "fail" in (beyond, verdict) else "undecided"), past
+    alone = len(trajectory) == 1 and trajectory.time[0] == spec.start_time
+    if alone and (start_from == "first row" or verdict == "pass"):
+        return "not-judged", "the only row is the start itself"
+    if verdict == "not-judged":
+        return verdict, "no budget was given; errors are reported all the same"
+    return verdict, ""
+
+
+def _beyond(
+    spec: OrbitSpec,
+    orbit: Orbit,
+    trajectory: Trajectory,
+    inside: npt.NDArray[np.bool_],
+    quantum: Floats,
+) -> tuple[str, str]:
+    """Verdict and sentence for rows past an end of the orbit; "not-judged" and "" without any.
+
+    The end of an orbit whose start has few digits is itself open by what those leave open.
+    """
     if inside.all():
-        return ""
-    row = int(np.argmin(inside))
-    after = trajectory.time[row] >= orbit.start_time
+        return "not-judged", ""
+    outside = np.flatnonzero(~inside)
+    after = bool(trajectory.time[outside[0]] >= orbit.start_time)
     end = orbit.ends_after if after else orbit.ends_before
     if end is None:
-        return ""
-    return (
+        raise ArithmeticError("an orbit without an end refused a time")
+    slack = end_spread(spec, orbit, quantum, after) + trajectory.quantisation.time
+    furthest = float(np.max(np.abs(trajectory.time[outside] - end.time)))
+    row = int(outside[0])
+    sentence = (
         f"the orbit ends at {end.reason} at time {end.time!r}, but the file goes on: row {row + 1} "
         f"has time {float(trajectory.time[row])!r}"
     )
-
-
-def _floor(
-    comparison: Comparison, expected: Expected, budget: Budget, carried: Floats
-) -> tuple[Floor, npt.NDArray[np.bool_]]:
-    """The floor under the position errors, and which samples may be judged."""
-    limit = np.full(comparison.time.size, budget.absolute.get("position", np.inf))
-    if "position" not in budget.absolute:
-        limit = _DEFAULT_SHARE * np.linalg.norm(expected.position, axis=1)
-    open_ = carried > limit
-    until = float(comparison.time[int(np.argmax(open_))]) if open_.any() else None
-    total = comparison.position_bound + comparison.position_quantum
-    worst = int(np.argmax(total))
-    source = "reference bound"
-    if comparison.position_quantum[worst] > comparison.position_bound[worst]:
-        source = "digits of the file"
-    judged = ~np.logical_or.accumulate(open_) if open_.any() else np.ones(limit.size, dtype=bool)
-    return Floor(float(total[worst]), source, until), judged
-
-
-def _judgements(
-    comparison: Comparison, budget: Budget, judged: npt.NDArray[np.bool_]
-) -> list[Judgement]:
-    series = {
-        "position": (
-            comparison.distance, comparison.position_bound, comparison.position_quantum
-        ),
-        "velocity": (
-            comparison.velocity_error, comparison.velocity_bound, comparison.velocity_quantum
-        ),
-        "clock": (
-            None if comparison.clock_error is None else np.abs(comparison.clock_error),
-            comparison.clock_bound,
-            comparison.clock_quantum,
-        ),
-    }  # fmt: skip
-    for name, drift in (
-        ("energy", comparison.energy), ("angular_momentum", comparison.angular_momentum)
-    ):  # fmt: skip
-        zero = np.zeros(comparison.time.size)
-        series[name] = (
-            (np.abs(drift.values), zero, drift.guard) if drift is not None else (None, None, None)
-        )
-    found = []
-    for quantity, tolerance in budget.absolute.items():
-        found.append(_one(comparison, quantity, np.full(judged.size, tolerance), series, judged))
-    for quantity, tolerance in budget.per_revolution.items():
-        if np.isnan(comparison.revolutions).any():
-            raise InputError("a budget per revolution needs the exact reference, not a stored set")
-        limit = tolerance * np.maximum(comparison.revolutions, 1.0)
-        judgement = _one(comparison, quantity, limit, series, judged)
-        found.append(replace(judgement, quantity=f"per_revolution.{quantity}"))
-    return found
-
-
-def _one(
-    comparison: Comparison,
-    quantity: str,
-    limit: Floats,
-    series: Mapping[str, tuple[Floats | None, Floats | None, Floats | None]],
-    judged: npt.NDArray[np.bool_],
-) -> Judgement:
-    deviation, bound, quantum = series[quantity]
-    if deviation is None or bound is None or quantum is None:
-        raise InputError(
-            f"there is a budget for {quantity}, but the file has nothing to judge it by "
-            "(velocities for velocity, energy and angular_momentum; proper_time, affine or "
-            "coordinate_time for clock); add the columns or drop that budget"
-        )
-    return judge(quantity, limit, deviation, bound, quantum, comparison.time, judged)
+    if furthest <= slack:
+        return "undecided", sentence + "; its digits cannot settle whether that is past the end"
+    return "fail", sentence

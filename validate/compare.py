@@ -1,4 +1,4 @@
-"""Obtained against expected: errors, their guards, and the drift of the invariants."""
+"""Obtained against expected: errors and their guards."""
 
 from __future__ import annotations
 
@@ -8,23 +8,27 @@ from typing import TYPE_CHECKING
 import numpy as np
 import numpy.typing as npt
 
+from truefall.validate.drift import Drifts
+
 if TYPE_CHECKING:
-    from truefall.reference.invariants import Invariants
+    from truefall.validate.carry import Spread
     from truefall.validate.trajectory import Trajectory
 
-__all__ = ["Comparison", "Drift", "Expected", "compare"]
+__all__ = ["Comparison", "Expected", "Guard", "compare"]
 
 Floats = npt.NDArray[np.float64]
-_EPS = float(np.finfo(np.float64).eps)
+#: Rounding of a computed difference and its norm, relative to it (five roundings, 2^-52 each).
+_ROUNDING = 5 * float(np.finfo(np.float64).eps)
 
 
 @dataclass(frozen=True)
 class Expected:
     """The reference at the trajectory's own time stamps, in its units; ``n`` samples.
 
-    ``*_low`` are second words (zeros if the reference has none), ``*_bound`` proven bounds.
-    ``clock`` is proper time (affine parameter for light, chart time on the proper clock).
-    ``azimuth`` is NaN where the reference does not know it.
+    ``*_low`` are second words (zeros if the reference has none), ``*_bound`` proven bounds on
+    what value and second word together leave open.  ``clock`` is proper time (affine parameter
+    for light, chart time on the proper clock).  ``azimuth`` (n,) counts from the start;
+    ``normal`` (3,) is the unit normal of the orbit's plane, zeros for radial motion.
     """
 
     position: Floats
@@ -41,32 +45,47 @@ class Expected:
 
 
 @dataclass(frozen=True)
-class Drift:
-    """A constant of the motion computed from the obtained states, minus its true value.
+class Guard:
+    """Everything that could make a computed deviation wrong, (n,) each, in its unit.
 
     Attributes
     ----------
-    values : (n,)
-        Relative (energy: to max(|E - 1|, GM/(c^2 r)); angular momentum: to its size).
-    guard : (n,)
-        What the digits and the rounding of the states could do to it.
-    slope : float
-        Least-squares slope per unit of time.
+    bound
+        Proven bound of the reference.
+    digits
+        Half a unit of the last digit that the file keeps.
+    stamps
+        The same of its time stamps, times the rate of change.
+    carried
+        The same of the start, where that is read from the file, carried along the orbit.
+    rounding
+        Of the comparison itself.
     """
 
-    values: Floats
-    guard: Floats
-    slope: float
+    bound: Floats
+    digits: Floats
+    stamps: Floats
+    carried: Floats
+    rounding: Floats
+
+    @property
+    def total(self) -> Floats:
+        """The guard ``w``."""
+        return self.bound + self.quantisation + self.rounding
+
+    @property
+    def quantisation(self) -> Floats:
+        """The share of the file's own digits."""
+        return self.digits + self.stamps + self.carried
 
 
 @dataclass(frozen=True)
 class Comparison:
     """All errors of a trajectory; float64 arrays of ``n`` samples in the file's units.
 
-    ``position_error`` is (n, 3); ``radial``, ``along``, ``cross`` are its components along the
-    expected radius, the direction of motion across it, and the normal of the orbit's plane.
-    ``*_bound`` is the reference's proven bound with the comparison's rounding, ``*_quantum``
-    what the file's digits (and its time stamps') leave open.
+    ``position_error`` is (n, 3), obtained minus expected; ``radial``, ``along``, ``cross`` are
+    its components along the expected radius, across it in the sense of the motion, and along
+    the normal of the orbit's plane.  ``clock_error`` is signed.
     """
 
     time: Floats
@@ -74,18 +93,12 @@ class Comparison:
     radial: Floats
     along: Floats
     cross: Floats
-    position_bound: Floats
-    position_quantum: Floats
+    position_guard: Guard
     velocity_error: Floats | None
-    velocity_bound: Floats | None
-    velocity_quantum: Floats | None
+    velocity_guard: Guard | None
     clock_error: Floats | None
-    clock_bound: Floats | None
-    clock_quantum: Floats | None
-    energy: Drift | None
-    angular_momentum: Drift | None
-    direction: Floats | None
-    null: Floats | None
+    clock_guard: Guard | None
+    drifts: Drifts
     revolutions: Floats
 
     @property
@@ -100,177 +113,104 @@ def _row_norm(values: Floats, n: int) -> Floats:
 
 
 def _axes(position: Floats, normal: Floats) -> tuple[Floats, Floats, Floats]:
-    radial = position / np.linalg.norm(position, axis=1, keepdims=True)
-    if not np.any(normal):  # radial motion: any perpendicular will do
-        other = np.eye(3)[int(np.argmin(np.abs(radial[0])))]
-        normal = np.cross(radial[0], other)
+    """Radial, along-track and cross-track unit vectors at each row, (n, 3) each."""
+    size = np.linalg.norm(position, axis=1, keepdims=True)
+    radial = position / np.where(size > 0, size, 1.0)
+    if not np.any(normal):  # radial motion has no plane: the one nearest to the x-y plane will do
+        far = int(np.argmax(size))
+        other = np.array([0.0, 0.0, 1.0]) if abs(radial[far, 2]) < 0.9 else np.eye(3)[0]
+        normal = other - radial[far] * float(radial[far] @ other)
         normal = normal / np.linalg.norm(normal)
     cross = np.broadcast_to(normal, position.shape)
-    along = np.cross(cross, radial)
-    return radial, along, cross
+    return radial, np.cross(cross, radial), cross
 
 
-def _slope(time: Floats, values: Floats) -> float:
-    good = np.isfinite(values)
-    if good.sum() < 2:
-        return 0.0
-    t = time[good] - time[good].mean()
-    spread = float(np.sum(t * t))
-    return float(np.sum(t * values[good]) / spread) if spread > 0 else 0.0
-
-
-def _sensitivity(trajectory: Trajectory, quanta: tuple[Floats, Floats]) -> tuple[Floats, Floats]:
-    """What the states' digits can do to energy and angular momentum, (n,) each.
-
-    First order, by central differences in the six components.
-    """
-    position, velocity = trajectory.position, trajectory.velocity
-    assert velocity is not None
-    energy, momentum = np.zeros(len(trajectory)), np.zeros(len(trajectory))
-    for which, base, quantum in ((0, position, quanta[0]), (1, velocity, quanta[1])):
-        size = np.linalg.norm(base, axis=1)
-        step = np.where(size > 0, size, 1.0) * 1e-5
-        for k in range(3):
-            moved = np.zeros_like(base)
-            moved[:, k] = step
-            pair = []
-            for s in (1.0, -1.0):
-                x = position + s * moved if which == 0 else position
-                v = velocity + s * moved if which == 1 else velocity
-                pair.append(_invariants(trajectory, x, v))
-            width = quantum[:, k] / (2 * step)
-            de = np.abs(pair[0].energy_minus_one - pair[1].energy_minus_one)
-            dl = np.linalg.norm(pair[0].angular_momentum - pair[1].angular_momentum, axis=1)
-            energy += de * width
-            momentum += dl * width
-    return energy, momentum
-
-
-def _invariants(trajectory: Trajectory, position: Floats, velocity: Floats) -> Invariants:
-    from truefall.reference.invariants import state_invariants
-
-    m = trajectory.metadata
-    return state_invariants(
-        position, velocity, m["chart"], m["system"], float(m["gm"]), m["particle"]
+def _velocity(
+    trajectory: Trajectory, expected: Expected, stamps: Spread, carried: Spread
+) -> tuple[Floats | None, Guard | None]:
+    if trajectory.velocity is None or expected.velocity is None:
+        return None, None
+    low, bound = expected.velocity_low, expected.velocity_bound
+    assert low is not None
+    assert bound is not None
+    error = np.linalg.norm((trajectory.velocity - expected.velocity) - low, axis=1)
+    guard = Guard(
+        bound=np.linalg.norm(bound, axis=1),
+        digits=_row_norm(trajectory.quantisation.velocity, len(trajectory)),
+        stamps=stamps.velocity,
+        carried=carried.velocity,
+        rounding=_ROUNDING * error,
     )
+    return error, guard
 
 
-def _drifts(
-    trajectory: Trajectory, energy_minus_one: float, momentum: float, normal: Floats
-) -> tuple[Drift | None, Drift | None, Floats | None, Floats | None]:
-    """Drifts of energy and angular momentum, tilt of its direction, and g(v, v) for light."""
-    if trajectory.velocity is None:
-        return None, None, None, None
-    n = len(trajectory)
-    inv = _invariants(trajectory, trajectory.position, trajectory.velocity)
-    quantum = trajectory.quantisation
-    quanta = (
-        np.broadcast_to(quantum.position, (n, 3)) + np.abs(np.spacing(trajectory.position)) / 2,
-        np.broadcast_to(quantum.velocity, (n, 3)) + np.abs(np.spacing(trajectory.velocity)) / 2,
+def _clock(
+    trajectory: Trajectory, expected: Expected, stamps: Spread, carried: Spread
+) -> tuple[Floats | None, Guard | None]:
+    """Error of the file's second clock: affine, coordinate_time or proper_time."""
+    if trajectory.metadata["particle"] == "light":
+        obtained = trajectory.affine
+    elif trajectory.metadata["clock"] == "proper":
+        obtained = trajectory.coordinate_time
+    else:
+        obtained = trajectory.proper_time
+    if obtained is None or expected.clock is None:
+        return None, None
+    assert expected.clock_low is not None
+    assert expected.clock_bound is not None
+    error = (obtained - expected.clock) - expected.clock_low
+    guard = Guard(
+        bound=expected.clock_bound,
+        digits=np.full(len(trajectory), trajectory.quantisation.clock),
+        stamps=stamps.clock,
+        carried=carried.clock,
+        rounding=_ROUNDING * np.abs(error),
     )
-    d_energy, d_momentum = _sensitivity(trajectory, quanta)
-    light = trajectory.metadata["particle"] == "light"
-    energy = None
-    if not light:
-        values = (inv.energy_minus_one - energy_minus_one) / inv.scale
-        guard = d_energy / inv.scale + 16 * _EPS
-        energy = Drift(values, guard, _slope(trajectory.time, values))
-    size = np.linalg.norm(inv.angular_momentum, axis=1)
-    if momentum == 0.0:
-        return energy, None, None, inv.null if light else None
-    true = normal * momentum
-    relative = np.linalg.norm(inv.angular_momentum - true, axis=1) / momentum
-    signed = np.copysign(relative, size - momentum)
-    drift = Drift(signed, d_momentum / momentum + 16 * _EPS, _slope(trajectory.time, signed))
-    with np.errstate(invalid="ignore"):
-        tilt = np.linalg.norm(np.cross(inv.angular_momentum / size[:, None], normal), axis=1)
-    return energy, drift, tilt, inv.null if light else None
-
-
-def _per_stamp(trajectory: Trajectory) -> Floats:
-    """Chart time per unit of the file's clock: 1, or dT/dtau on the proper clock."""
-    if trajectory.metadata["clock"] != "proper" or trajectory.velocity is None:
-        return np.ones(len(trajectory))
-    rate = _invariants(trajectory, trajectory.position, trajectory.velocity).rate
-    return np.where(rate > 0, 1.0 / np.where(rate > 0, rate, 1.0), 1.0)
+    return error, guard
 
 
 def compare(
     trajectory: Trajectory,
     expected: Expected,
     *,
-    energy_minus_one: float,
-    momentum: float,
-    carried: Floats,
+    drifts: Drifts,
+    stamps: Spread,
+    carried: Spread,
 ) -> Comparison:
-    """Errors of the obtained trajectory.
+    """Errors of the obtained trajectory, ``(obtained - value) - second word``, with guards.
 
     Parameters
     ----------
     trajectory : Trajectory
     expected : Expected
         At the same ``n`` time stamps.
-    energy_minus_one, momentum : float
-        The orbit's exact constants, in the file's units.
-    carried : (n,)
-        What the digits of the start leave open about the expected position.
+    drifts : Drifts
+        Of the invariants, for the record.
+    stamps, carried : Spread
+        What the digits of the time stamps, and those of the start, leave open.
     """
-    n = len(trajectory)
     error = (trajectory.position - expected.position) - expected.position_low
     radial, along, cross = _axes(expected.position, expected.normal)
-    distance = np.linalg.norm(error, axis=1)
-    quantum = trajectory.quantisation
-    pace = _per_stamp(trajectory)
-    speed = (
-        np.linalg.norm(expected.velocity, axis=1) if expected.velocity is not None else np.zeros(n)
+    guard = Guard(
+        bound=np.linalg.norm(expected.position_bound, axis=1),
+        digits=_row_norm(trajectory.quantisation.position, len(trajectory)),
+        stamps=stamps.position,
+        carried=carried.position,
+        rounding=_ROUNDING * np.linalg.norm(error, axis=1),
     )
-    stamp = quantum.time * speed * pace
-    velocity_error = velocity_bound = velocity_quantum = None
-    if trajectory.velocity is not None and expected.velocity is not None:
-        assert expected.velocity_low is not None
-        assert expected.velocity_bound is not None
-        dv = (trajectory.velocity - expected.velocity) - expected.velocity_low
-        velocity_error = np.linalg.norm(dv, axis=1)
-        velocity_bound = np.linalg.norm(expected.velocity_bound, axis=1) + 4 * _EPS * velocity_error
-        turn = speed / np.linalg.norm(expected.position, axis=1)
-        velocity_quantum = _row_norm(quantum.velocity, n) + (stamp + carried) * 4 * turn
-    clock_error = clock_bound = clock_quantum = None
-    obtained = _clock(trajectory)
-    if obtained is not None and expected.clock is not None:
-        assert expected.clock_low is not None
-        assert expected.clock_bound is not None
-        clock_error = (obtained - expected.clock) - expected.clock_low
-        clock_bound = expected.clock_bound + 4 * _EPS * np.abs(clock_error)
-        clock_quantum = np.full(n, quantum.clock) + quantum.time * np.maximum(pace, 1.0)
-    energy, momentum_drift, tilt, null = _drifts(
-        trajectory, energy_minus_one, momentum, expected.normal
-    )
+    velocity_error, velocity_guard = _velocity(trajectory, expected, stamps, carried)
+    clock_error, clock_guard = _clock(trajectory, expected, stamps, carried)
     return Comparison(
         time=trajectory.time,
         position_error=error,
         radial=np.sum(error * radial, axis=1),
         along=np.sum(error * along, axis=1),
         cross=np.sum(error * cross, axis=1),
-        position_bound=np.linalg.norm(expected.position_bound, axis=1) + 4 * _EPS * distance,
-        position_quantum=_row_norm(quantum.position, n) + stamp + carried,
+        position_guard=guard,
         velocity_error=velocity_error,
-        velocity_bound=velocity_bound,
-        velocity_quantum=velocity_quantum,
+        velocity_guard=velocity_guard,
         clock_error=clock_error,
-        clock_bound=clock_bound,
-        clock_quantum=clock_quantum,
-        energy=energy,
-        angular_momentum=momentum_drift,
-        direction=tilt,
-        null=null,
+        clock_guard=clock_guard,
+        drifts=drifts,
         revolutions=np.abs(expected.azimuth) / (2 * np.pi),
     )
-
-
-def _clock(trajectory: Trajectory) -> Floats | None:
-    """The second clock of the file: what is compared as ``clock``."""
-    if trajectory.metadata["particle"] == "light":
-        return trajectory.affine
-    if trajectory.metadata["clock"] == "proper":
-        return trajectory.coordinate_time
-    return trajectory.proper_time

@@ -69,8 +69,11 @@ def _refine(spec: OrbitSpec, start: Floats, times: Floats, position: Floats) -> 
     for _ in range(_ITERATIONS):
         here = _moved(spec, start)
         columns = sensitivities(here, here.orbit(), times).reshape(-1, 6) * size
+        known = np.isfinite(columns).all(axis=1)  # a moved start may plunge before the last row
         # light: the size of the direction means nothing, the pseudo-inverse leaves it alone
-        step = np.linalg.lstsq(columns, residual.ravel(), rcond=1e-14 if not light else 1e-10)[0]
+        step = np.linalg.lstsq(
+            columns[known], residual.ravel()[known], rcond=1e-14 if not light else 1e-10
+        )[0]
         for _ in range(12):
             trial = start + step * size
             new = _residual(_moved(spec, trial), times, position)

@@ -14,7 +14,7 @@ if TYPE_CHECKING:
     from collections.abc import Sequence
 
     from truefall.validate.check import CheckResult
-    from truefall.validate.compare import Drift
+    from truefall.validate.drift import Drift
 
 __all__ = ["document", "error_summary", "file_object"]
 
@@ -32,17 +32,24 @@ def _plain(value: Any) -> Any:
     return value
 
 
+def _largest(values: Floats) -> float:
+    """Largest size; rows without a value (a state faster than light) are left out."""
+    return float(np.max(np.abs(values), where=np.isfinite(values), initial=0.0))
+
+
 def error_summary(values: Floats | None, time: Floats) -> dict[str, float] | None:
     """Largest size, root mean square, and the time of the largest."""
     if values is None or not values.size:
         return None
     size = np.abs(values)
-    worst = int(np.argmax(size))
-    return {
-        "max": float(size[worst]),
-        "rms": float(np.sqrt(np.mean(size**2))),
-        "at_time": float(time[worst]),
-    }
+    size = size[np.isfinite(size)]
+    if not size.size:
+        return None
+    worst = int(np.nanargmax(np.abs(values)))
+    largest = float(np.abs(values[worst]))
+    # scaled, so that squares of tiny or huge errors neither vanish nor overflow
+    rms = largest * float(np.sqrt(np.mean((size / largest) ** 2))) if largest > 0 else 0.0
+    return {"max": largest, "rms": rms, "at_time": float(time[worst])}
 
 
 def _orbit(result: CheckResult) -> dict[str, Any] | None:
@@ -70,9 +77,9 @@ def _drift(drift: Drift | None) -> dict[str, float] | None:
     if drift is None:
         return None
     return {
-        "max_drift": float(np.max(np.abs(drift.values))),
+        "max_drift": _largest(drift.values),
         "slope": drift.slope,
-        "guard": float(np.max(drift.guard)),
+        "guard": _largest(drift.guard),
     }
 
 
@@ -80,13 +87,15 @@ def _invariants(result: CheckResult) -> dict[str, Any]:
     comparison = result.comparison
     if comparison is None:
         return {"energy": None, "angular_momentum": None, "norm": None}
-    momentum = _drift(comparison.angular_momentum)
-    if momentum is not None and comparison.direction is not None:
-        momentum["max_tilt"] = float(np.max(comparison.direction))
-    norm = None
-    if comparison.null is not None:
-        norm = {"max_drift": float(np.max(np.abs(comparison.null)))}
-    return {"energy": _drift(comparison.energy), "angular_momentum": momentum, "norm": norm}
+    drifts = comparison.drifts
+    momentum = _drift(drifts.angular_momentum)
+    if momentum is not None and drifts.direction is not None:
+        momentum["max_tilt"] = _largest(drifts.direction)
+    return {
+        "energy": _drift(drifts.energy),
+        "angular_momentum": momentum,
+        "norm": _drift(drifts.norm),
+    }
 
 
 def _judged(result: CheckResult) -> list[dict[str, Any]]:
@@ -98,12 +107,14 @@ def _judged(result: CheckResult) -> list[dict[str, Any]]:
             "deviation": j.deviation,
             "guard": j.guard,
             "margin": j.margin,
+            "adequacy": j.adequacy,
             "bound": j.bound,
             "quantisation": j.quantisation,
             "row": j.row + 1,
             "time": j.time,
             "undecided_rows": j.undecided_rows,
             "failing_rows": j.failing_rows,
+            "unjudged_rows": j.unjudged_rows,
         }
         for j in result.judgements
     ]
@@ -126,7 +137,7 @@ def file_object(result: CheckResult) -> dict[str, Any]:
         "name": result.name,
         "verdict": result.verdict,
         "reason": result.reason or None,
-        "samples": len(result.trajectory) if result.trajectory is not None else 0,
+        "samples": result.samples,
         "orbit": _orbit(result),
         "start_from": result.start_from or None,
         "start": None,
@@ -157,7 +168,7 @@ def file_object(result: CheckResult) -> dict[str, Any]:
         }
         found["reference"] = {
             "kind": result.reference,
-            "bound": float(np.max(comparison.position_bound)),
+            "bound": float(np.max(comparison.position_guard.bound)),
             "certified_samples": int(time.size) if result.reference == "exact" else 0,
         }
         growth = result.growth

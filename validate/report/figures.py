@@ -112,7 +112,7 @@ def _draw_errors(axes: Axes, result: CheckResult) -> None:
     assert spec is not None
     unit = units_of(spec.system)
     time = comparison.time
-    guard = comparison.position_bound + comparison.position_quantum
+    guard = comparison.position_guard.total
     for values, colour, label, width in (
         (comparison.distance, _ERROR, "position", 1.4),
         (np.abs(comparison.radial), _EXPECTED, "radial", 0.8),
@@ -149,8 +149,9 @@ def _draw_invariants(axes: Axes, result: CheckResult) -> None:
     assert spec is not None
     drawn = np.zeros(1)
     for drift, colour, label in (
-        (comparison.energy, _EXPECTED, "energy"),
-        (comparison.angular_momentum, _OBTAINED, "angular momentum"),
+        (comparison.drifts.energy, _EXPECTED, "energy"),
+        (comparison.drifts.angular_momentum, _OBTAINED, "angular momentum"),
+        (comparison.drifts.norm, _ALONG, "norm"),
     ):
         if drift is None:
             continue
@@ -158,11 +159,6 @@ def _draw_invariants(axes: Axes, result: CheckResult) -> None:
         drawn = np.append(drawn, values)
         axes.plot(comparison.time, _positive(values), color=colour, lw=1.0, label=label)
         axes.plot(comparison.time, _positive(drift.guard), color=colour, lw=0.8, ls=":")
-    if comparison.null is not None:
-        drawn = np.append(drawn, np.abs(comparison.null))
-        axes.plot(
-            comparison.time, _positive(np.abs(comparison.null)), color=_ALONG, lw=1.0, label="norm"
-        )
     if drawn.size == 1:
         axes.text(0.5, 0.5, "no velocities in the file", transform=axes.transAxes, ha="center")
     else:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import textwrap
 from typing import TYPE_CHECKING, Any
 
@@ -14,6 +15,8 @@ if TYPE_CHECKING:
 __all__ = ["VERDICTS", "render", "units_of"]
 
 WIDTH = 80
+#: T/b below which the reference is called too coarse (a test-uncertainty-ratio habit).
+ADEQUATE = 4
 #: Verdict to the word shown and its colour (by name).
 VERDICTS = {
     "pass": ("PASS", "green"),
@@ -22,6 +25,20 @@ VERDICTS = {
     "not-judged": ("NOT JUDGED", "cyan"),
     "unusable": ("UNUSABLE", "red"),
 }
+
+
+#: Where a start comes from, in words.
+_STARTS = {
+    "orbit file": "its declaration (orbit file, header, sidecar)",
+    "first row": "the first row",
+    "fit": "the best fit to the positions",
+    "stored set": "the stored set",
+}
+
+
+def _printable(text: str) -> str:
+    """Names are somebody else's text: control characters must not reach the terminal."""
+    return "".join(c if c.isprintable() else "?" for c in text)
 
 
 def units_of(system: str) -> dict[str, str]:
@@ -37,8 +54,19 @@ def _number(value: float | None) -> str:
 
 
 def _error_number(value: float) -> str:
-    """Errors and uncertainties: two digits are all they deserve."""
+    """Errors: two digits are all they deserve."""
     return "0" if value == 0 else f"{value:.1e}"
+
+
+def _upwards(value: float) -> str:
+    """Guards and bounds: two digits, never rounded down (GUM, 7.2.6)."""
+    text = _error_number(value)
+    if float(text) >= value or not math.isfinite(value):
+        return text
+    digits, exponent = text.split("e")
+    return (
+        f"{float(digits) + 0.1:.1f}e{exponent}" if digits != "9.9" else _error_number(value * 1.1)
+    )
 
 
 def _orbit_lines(result: CheckResult, units: dict[str, str]) -> list[str]:
@@ -85,7 +113,11 @@ def _error_lines(result: CheckResult, units: dict[str, str]) -> list[str]:
             f"  {label:<14}{_error_number(summary['max']):>10}  "
             f"{_error_number(summary['rms']):>10}  {_number(summary['at_time']):>14}  {unit}"
         )
-    for label, drift in (("energy", comparison.energy), ("ang. mom.", comparison.angular_momentum)):
+    for label, drift in (
+        ("energy", comparison.drifts.energy),
+        ("ang. mom.", comparison.drifts.angular_momentum),
+        ("norm", comparison.drifts.norm),
+    ):
         if drift is not None:
             summary = error_summary(drift.values, comparison.time)
             assert summary is not None
@@ -111,13 +143,35 @@ def _floor_line(result: CheckResult, units: dict[str, str]) -> list[str]:
     floor = result.floor
     if floor is None:
         return []
-    text = f"{_error_number(floor.position)} {units['length']} ({floor.source})"
+    text = f"{_upwards(floor.position)} {units['length']} ({floor.source})"
     lines = [f"  {'floor':<10}{text}"]
     if floor.predictable_until is not None:
-        lines.append(
-            f"  {'':<10}the file's digits do not determine the orbit from time "
-            f"{_number(floor.predictable_until)} on; nothing after it is judged"
+        lines += textwrap.wrap(
+            f"from time {_number(floor.predictable_until)} on the first row's digits no longer "
+            "determine the orbit; nothing after that is judged (give the exact start with "
+            "--orbit, or find it with --fit)",
+            WIDTH,
+            initial_indent=" " * 12,
+            subsequent_indent=" " * 12,
         )
+    return lines
+
+
+def _rows(count: int) -> str:
+    return "1 row" if count == 1 else f"{count} rows"
+
+
+def _start_lines(result: CheckResult) -> list[str]:
+    orbit = result.orbit
+    assert orbit is not None
+    samples = f"{_rows(result.samples)}, start from {_STARTS[result.start_from]}"
+    lines = [f"  {'samples':<10}{samples}"]
+    if result.start_from == "fit":
+        for name, vector in (("position", orbit.position), ("velocity", orbit.velocity_used)):
+            lines.append(f"  {'':<10}{name} {', '.join(f'{x:.14g}' for x in vector)}")
+        lines.append(f"  {'':<10}at time {orbit.start_time!r}; judged is what remains")
+    if result.reference != "exact":
+        lines.append(f"  {'expected':<10}{_printable(result.reference)}")
     return lines
 
 
@@ -128,35 +182,36 @@ def _rule_lines(result: CheckResult) -> list[str]:
     for j in result.judgements:
         lines.append(f"  {j.quantity}: {j.outcome.upper()} at row {j.row + 1}, time {j.time:.9g}")
         lines.append(
-            f"      T = {j.tolerance:.3g}   d = {j.deviation:.3g}   w = {_error_number(j.guard)}"
-            f"   (reference bound {_error_number(j.bound)}, digits {_error_number(j.quantisation)})"
+            f"      T = {j.tolerance:.3g}  d = {j.deviation:.3g}  w = {_upwards(j.guard)}"
+            f"  (reference bound {_upwards(j.bound)}, digits {_upwards(j.quantisation)})"
         )
-        if j.bound > 0 and j.tolerance / j.bound < 4:
+        if j.adequacy is not None and j.adequacy < ADEQUATE:
             lines.append(
-                f"      the reference is only {j.tolerance / j.bound:.2g} times finer than T"
+                f"      the reference is only {j.adequacy:.2g} times finer than T: T/b should "
+                f"be {ADEQUATE} or more"
             )
         if j.outcome == "fail":
-            lines.append(f"      {j.failing_rows} rows fail")
+            lines.append(f"      {_rows(j.failing_rows)} out of budget for certain")
         elif j.outcome == "undecided":
-            lines.append(f"      {j.undecided_rows} rows are undecided")
+            unjudged = f", {j.unjudged_rows} of them not judged" if j.unjudged_rows else ""
+            lines.append(f"      {_rows(j.undecided_rows)} undecided{unjudged}")
     return lines
 
 
 def render(result: CheckResult) -> str:
     """The page for one trajectory, plain text of at most 80 columns where names allow."""
     word, _ = VERDICTS[result.verdict]
-    lines = [f"{word}  {result.file}" + (f" [{result.name}]" if result.spec else "")]
+    file, name = _printable(result.file), _printable(result.name)
+    lines = [f"{word}  {file}" + (f" [{name}]" if result.spec else "")]
     if result.reason:
-        text = result.reason.removeprefix(f"{result.file}: ")
+        text = _printable(result.reason.removeprefix(f"{result.file}: "))
         lines += textwrap.wrap(text, WIDTH, initial_indent="  ", subsequent_indent="  ")
     if result.orbit is None or result.spec is None:
         return "\n".join(lines)
     units = units_of(result.spec.system)
     lines += _orbit_lines(result, units)
     if result.comparison is not None:
-        lines.append(
-            f"  {'samples':<10}{len(result.comparison.time)}, start from {result.start_from}"
-        )
+        lines += _start_lines(result)
         lines += _error_lines(result, units)
         growth = _growth_line(result)
         lines += [growth] if growth else []
@@ -175,7 +230,7 @@ def explain_residual(result: CheckResult) -> str:
         "along": float(abs(comparison.along).max()),
         "cross": float(abs(comparison.cross).max()),
     }
-    guard = comparison.position_bound + comparison.position_quantum
+    guard = comparison.position_guard.total
     above = comparison.distance > guard
     if not above.any():
         return "  residual  within what digits and reference leave open: nothing to explain"
