@@ -59,6 +59,11 @@ class Budget:
     def __bool__(self) -> bool:
         return bool(self.absolute or self.per_revolution)
 
+    def flat(self) -> dict[str, float]:
+        """All tolerances by name; those that grow as ``per_revolution.position`` and so on."""
+        growing = {f"per_revolution.{k}": v for k, v in self.per_revolution.items()}
+        return {**self.absolute, **growing}
+
 
 @dataclass(frozen=True)
 class Judgement:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -39,7 +39,7 @@ class CheckResult:
 
     ``verdict`` is pass, fail, undecided, not-judged or unusable; ``reason`` is the sentence
     for a verdict that no tolerance explains.  ``trajectory`` holds the rows that were compared
-    (those the orbit reaches), of ``samples`` in the file.
+    (those the orbit reaches), of ``samples`` in the file; ``tolerances`` are the budget's.
     """
 
     file: str
@@ -55,6 +55,7 @@ class CheckResult:
     floor: Floor | None = None
     growth: Growth | None = None
     samples: int = 0
+    tolerances: Mapping[str, float] = field(default_factory=dict)
     start_from: str = ""
     reference: str = "exact"
 
@@ -228,6 +229,7 @@ def check_trajectory(
         expected=expected,
         comparison=comparison,
         judgements=tuple(judgements),
+        tolerances=budget.flat(),
         floor=floor,
         growth=growth_of(
             kept.time, comparison.distance, comparison.position_guard.total, spec.start_time

@@ -1,4 +1,4 @@
-"""Pictures of a check: the orbit from above and from the side, errors and invariants over time."""
+"""The picture of a check: the orbit from above and from the side, errors and drifts over time."""
 
 from __future__ import annotations
 
@@ -8,165 +8,189 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 import numpy.typing as npt
 
+from truefall.validate.report.orbit_view import draw_orbit
+from truefall.validate.report.style import (
+    ALONG,
+    CROSS,
+    GUARD,
+    LIMIT,
+    POSITION,
+    RADIAL,
+    log_axis,
+    readable,
+    time_scale,
+)
 from truefall.validate.report.text import VERDICTS, units_of
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
 
     from truefall.validate.check import CheckResult
+    from truefall.validate.compare import Comparison
 
 __all__ = ["write_figures"]
 
 Floats = npt.NDArray[np.float64]
-
-# Okabe & Ito's palette, told apart with every common kind of colour vision.
-_EXPECTED, _OBTAINED, _ERROR, _ALONG, _GUARD, _LIMIT = (
-    "#0072B2", "#D55E00", "#000000", "#009E73", "#999999", "#CC79A7",
-)  # fmt: skip
-_MOST_POINTS = 4000
+#: Decades below the errors down to which a guard is drawn; deeper ones are told in words.
+_NEAR = 1e-4
 
 
-def _plane(result: CheckResult, points: Floats) -> Floats:
-    """Components along the start's radius, across it in the orbit's plane, and out of it."""
-    orbit = result.orbit
-    assert orbit is not None
-    first = np.array(orbit.position)
-    first = first / np.linalg.norm(first)
-    normal = np.array(orbit.angular_momentum_direction)
-    if not normal.any():
-        normal = np.cross(first, np.eye(3)[int(np.argmin(np.abs(first)))])
-        normal /= np.linalg.norm(normal)
-    turned: Floats = points @ np.column_stack([first, np.cross(normal, first), normal])
-    return turned
+class _Clock:
+    """The time axis of a result: factor, unit, label."""
+
+    def __init__(self, result: CheckResult) -> None:
+        assert result.comparison is not None
+        assert result.spec is not None
+        time = result.comparison.time
+        unit = units_of(result.spec.system)["time"]
+        self.factor, self.unit = time_scale(float(np.ptp(time)), unit)
+        self.time = time / self.factor
+        self.label = f"{result.spec.clock} time / {readable(self.unit)}"
 
 
-def _horizon_radius(result: CheckResult) -> float:
-    from truefall.reference.charts import chart_radius
-    from truefall.reference.units import length_in
-
-    spec = result.spec
-    assert spec is not None
-    return float(chart_radius(spec.chart, 2.0)) * length_in(spec.system, spec.gm)
-
-
-def _scale(size: float, unit: str) -> tuple[float, str]:
-    """A factor of a thousand that keeps the labels short."""
-    if unit not in ("m", "km"):
-        return 1.0, unit
-    metres = size * (1000.0 if unit == "km" else 1.0)
-    base = 1000.0 if unit == "km" else 1.0
-    for factor, name in ((1e12, "10$^9$ km"), (1e9, "10$^6$ km"), (1e6, "10$^3$ km"), (1e3, "km")):
-        if metres >= 3 * factor:
-            return factor / base, name
-    return 1.0 / base, "m"
-
-
-def _draw_orbit(axes: Axes, side: Axes, result: CheckResult) -> None:
-    from matplotlib.patches import Circle
-
-    expected, trajectory, spec = result.expected, result.trajectory, result.spec
-    assert expected is not None
-    assert trajectory is not None
-    assert spec is not None
-    true = _plane(result, expected.position)
-    seen = _plane(result, trajectory.position)
-    size = float(np.abs(true).max())
-    factor, unit = _scale(size, units_of(spec.system)["length"])
-    true, seen = true / factor, seen / factor
-    thin = slice(None, None, max(1, len(seen) // _MOST_POINTS))
-    line = {"color": _EXPECTED, "lw": 1.0, "label": "expected"}
-    dots = {"color": _OBTAINED, "ls": "none", "marker": ".", "ms": 3.0, "label": "obtained"}
-    dense = len(true) >= 60
-    if not dense:
-        line |= {"ls": "none", "marker": "o", "ms": 5.0, "fillstyle": "none"}
-    axes.plot(true[thin, 0], true[thin, 1], **line)  # type: ignore[arg-type]
-    axes.plot(seen[thin, 0], seen[thin, 1], **dots)  # type: ignore[arg-type]
-    horizon = _horizon_radius(result) / factor
-    if horizon > 2e-3 * size / factor:
-        axes.add_patch(Circle((0, 0), horizon, color="black", zorder=0))
-    else:
-        axes.plot([0], [0], "k+", ms=7)
-    axes.set_aspect("equal", adjustable="datalim")
-    axes.set_xlabel(f"along the start's radius / {unit}")
-    axes.set_ylabel(f"across it / {unit}")
-    axes.set_title("in the orbit's plane", fontsize=10)
-    side.plot(true[thin, 0], true[thin, 2], **line)  # type: ignore[arg-type]
-    side.plot(seen[thin, 0], seen[thin, 2], **dots)  # type: ignore[arg-type]
-    width = max(float(np.abs(seen[:, 2]).max()), 1e-3 * float(np.abs(seen[:, :2]).max()))
-    side.set_ylim(-1.1 * width, 1.1 * width)
-    side.set_xlabel(f"along the start's radius / {unit}")
-    side.set_ylabel(f"out of the plane / {unit}")
-    side.set_title("from the side", fontsize=10)
-    handles, labels = axes.get_legend_handles_labels()
-    side.legend(handles, labels, fontsize=8, loc="upper right")
-
-
-def _positive(values: Floats) -> Floats:
-    """Zeros would vanish from a logarithmic axis without a word: they become gaps."""
-    return np.where(values > 0, values, np.nan)
-
-
-def _draw_errors(axes: Axes, result: CheckResult) -> None:
-    comparison, spec = result.comparison, result.spec
+def _tolerances(result: CheckResult, quantity: str) -> Floats | None:
+    """The tightest tolerance at each row, (n,), or None."""
+    comparison = result.comparison
     assert comparison is not None
-    assert spec is not None
-    unit = units_of(spec.system)
-    time = comparison.time
+    lines = [
+        np.full(comparison.time.size, value)
+        for name, value in result.tolerances.items()
+        if name == quantity
+    ] + [
+        value * np.maximum(comparison.revolutions, 1.0)
+        for name, value in result.tolerances.items()
+        if name == f"per_revolution.{quantity}"
+    ]
+    return np.min(lines, axis=0) if lines else None
+
+
+def _line(axes: Axes, time: Floats, values: Floats, **style: Any) -> None:
+    """A curve on a logarithmic axis; zeros become gaps, few samples get dots."""
+    shown = np.where(values > 0, values, np.nan)
+    if not np.isfinite(shown).any():
+        return
+    if time.size < 100 and style.get("ls", "-") == "-":
+        style |= {"marker": ".", "ms": 4.0}
+    axes.plot(time, shown, **style)
+
+
+def _guard_and_limit(
+    axes: Axes, clock: _Clock, errors: Floats, guard: Floats, limit: Floats | None, unit: str
+) -> None:
+    """Guard band and tolerance; a guard far below the errors is told, not drawn."""
+    positive = errors[errors > 0]
+    near = not positive.size or guard.max() >= _NEAR * np.percentile(positive, 10)
+    if near and np.any(guard > 0):
+        axes.fill_between(clock.time, np.where(guard > 0, guard, np.nan), 0, color=GUARD, alpha=0.3)
+        _line(axes, clock.time, guard, color=GUARD, lw=1.0, ls="--", label="guard w")
+    elif np.any(guard > 0):
+        far = f"guard w: {guard.max():.1e} {readable(unit)} at most, far below"
+        axes.plot([], [], " ", label=far)
+    if limit is not None:
+        axes.plot(clock.time, limit, color=LIMIT, lw=1.4, ls="-.", label="tolerance T")
+
+
+def _legend_below(axes: Axes, columns: int) -> None:
+    """The legend under the axes, where it hides no curve."""
+    axes.legend(
+        ncols=columns, loc="upper center", bbox_to_anchor=(0.5, -0.2), frameon=False,
+        columnspacing=1.2, handlelength=1.6,
+    )  # fmt: skip
+
+
+def _draw_errors(axes: Axes, result: CheckResult, clock: _Clock) -> None:
+    comparison = result.comparison
+    assert comparison is not None
+    assert result.spec is not None
+    unit = units_of(result.spec.system)["length"]
     guard = comparison.position_guard.total
-    for values, colour, label, width in (
-        (comparison.distance, _ERROR, "position", 1.4),
-        (np.abs(comparison.radial), _EXPECTED, "radial", 0.8),
-        (np.abs(comparison.along), _ALONG, "along", 0.8),
-        (np.abs(comparison.cross), _OBTAINED, "cross", 0.8),
+    _line(axes, clock.time, comparison.distance, color=POSITION, lw=3.0, alpha=0.35, label="total")
+    for values, colour, label in (
+        (comparison.radial, RADIAL, "radial"),
+        (comparison.along, ALONG, "along"),
+        (comparison.cross, CROSS, "cross"),
     ):
-        shown = _positive(values)
-        if np.isfinite(shown).any():
-            style = {"marker": ".", "ms": 3.0} if time.size < 200 else {}
-            axes.plot(time, shown, color=colour, lw=width, label=label, **style)  # type: ignore[arg-type]
-    if np.any(guard > 0):
-        axes.plot(time, _positive(guard), color=_GUARD, lw=1.0, ls="--", label="guard w")
-    for j in result.judgements:
-        if j.quantity == "position":
-            axes.axhline(j.tolerance, color=_LIMIT, lw=1.2, ls="-.", label="tolerance T")
-    _log_axis(axes, comparison.distance)
-    axes.set_ylabel(f"position error / {unit['length']}")
-    axes.set_xlabel(f"{spec.clock} time / {unit['time']}")
-    axes.set_title("errors over time", fontsize=10)
-    axes.legend(fontsize=8, ncol=2)
+        _line(axes, clock.time, np.abs(values), color=colour, lw=1.0, label=label)
+    limit = _tolerances(result, "position")
+    _guard_and_limit(axes, clock, comparison.distance, guard, limit, unit)
+    until = result.floor.predictable_until if result.floor is not None else None
+    if until is not None:
+        axes.axvline(until / clock.factor, color=POSITION, lw=1.0, ls=":", label="digits end")
+    log_axis(axes, comparison.distance, guard if result.judgements else None, limit)
+    axes.set_ylabel(f"position error / {readable(unit)}")
+    axes.set_xlabel(clock.label)
+    axes.set_title("position error over time")
+    _legend_below(axes, 7)
 
 
-def _log_axis(axes: Axes, values: Floats) -> None:
-    if np.any(values > 0):
-        axes.set_yscale("log")
-    else:
-        axes.text(0.5, 0.5, "all zero", transform=axes.transAxes, ha="center", va="center")
-    axes.grid(True, which="major", color="0.9", lw=0.6)
-
-
-def _draw_invariants(axes: Axes, result: CheckResult) -> None:
-    comparison, spec = result.comparison, result.spec
+def _draw_rates(axes: Axes, result: CheckResult, clock: _Clock) -> None:
+    """Velocity error on the left axis, the second clock's on the right one."""
+    comparison = result.comparison
     assert comparison is not None
-    assert spec is not None
-    drawn = np.zeros(1)
+    assert result.spec is not None
+    units = units_of(result.spec.system)
+    axis: Any = axes
+    named: list[str] = []
+    for quantity, values, unit, colour in (
+        ("velocity", comparison.velocity_error, units["speed"], RADIAL),
+        ("clock", comparison.clock_error, _clock_unit(result, units), CROSS),
+    ):
+        if values is None:
+            continue
+        if named:
+            axis = axes.twinx()
+            axis.spines["right"].set_visible(True)
+        light = quantity == "clock" and result.spec.particle == "light"
+        shown = "affine parameter" if light else quantity
+        size = np.abs(values)
+        _line(axis, clock.time, size, color=colour, lw=1.0)
+        limit = _tolerances(result, quantity)
+        if limit is not None:
+            axis.plot(clock.time, limit, color=colour, lw=1.4, ls="-.")
+        log_axis(axis, size, None, limit, grid=not named)
+        axis.set_ylabel(f"{shown} error / {readable(unit)}", color=colour)
+        axis.tick_params(axis="y", colors=colour)
+        named.append(shown)
+    axes.set_xlabel(clock.label)
+    axes.set_title(" and ".join(named) + " error")
+
+
+def _clock_unit(result: CheckResult, units: dict[str, str]) -> str:
+    assert result.spec is not None
+    return units["length"] if result.spec.particle == "light" else units["time"]
+
+
+def _draw_invariants(axes: Axes, result: CheckResult, clock: _Clock) -> None:
+    comparison = result.comparison
+    assert comparison is not None
+    drifts, drawn, floors = comparison.drifts, [], []
     for drift, colour, label in (
-        (comparison.drifts.energy, _EXPECTED, "energy"),
-        (comparison.drifts.angular_momentum, _OBTAINED, "angular momentum"),
-        (comparison.drifts.norm, _ALONG, "norm"),
+        (drifts.energy, RADIAL, "energy"),
+        (drifts.angular_momentum, CROSS, "angular momentum"),
+        (drifts.norm, ALONG, "norm"),
     ):
         if drift is None:
             continue
         values = np.abs(drift.values)
-        drawn = np.append(drawn, values)
-        axes.plot(comparison.time, _positive(values), color=colour, lw=1.0, label=label)
-        axes.plot(comparison.time, _positive(drift.guard), color=colour, lw=0.8, ls=":")
-    if drawn.size == 1:
-        axes.text(0.5, 0.5, "no velocities in the file", transform=axes.transAxes, ha="center")
-    else:
-        _log_axis(axes, drawn)
-        axes.legend(fontsize=8)
+        drawn.append(values)
+        floors.append(drift.guard)
+        _line(axes, clock.time, values, color=colour, lw=1.0, label=label)
+        _line(axes, clock.time, drift.guard, color=colour, lw=0.9, ls=":")
+    log_axis(axes, np.concatenate(drawn), np.concatenate(floors), None)
     axes.set_ylabel("relative drift")
-    axes.set_xlabel(f"{spec.clock} time / {units_of(spec.system)['time']}")
-    axes.set_title("invariants over time (dotted: what the digits allow)", fontsize=10)
+    axes.set_xlabel(clock.label)
+    axes.set_title("invariants (dotted: what digits allow)")
+    _legend_below(axes, 3)
+
+
+def _panels(comparison: Comparison) -> list[list[str]]:
+    last = []
+    if comparison.velocity_error is not None or comparison.clock_error is not None:
+        last.append("rates")
+    if comparison.drifts.angular_momentum is not None:
+        last.append("invariants")
+    rows = [["plane", "side"], ["errors", "errors"]]
+    return [*rows, (last * 2)[:2]] if last else rows
 
 
 def write_figures(result: CheckResult, directory: Path, stem: str) -> list[Path]:
@@ -180,19 +204,36 @@ def write_figures(result: CheckResult, directory: Path, stem: str) -> list[Path]
     if result.comparison is None:
         return []
     import matplotlib as mpl
-
-    mpl.use("Agg")
+    from matplotlib.backends.backend_agg import FigureCanvasAgg
     from matplotlib.figure import Figure
 
-    with mpl.rc_context({"font.size": 9, "axes.spines.top": False, "axes.spines.right": False}):
-        figure: Any = Figure(figsize=(11, 8), layout="constrained")
-        grid = figure.subplots(2, 2, width_ratios=[1, 1.1])
-        _draw_orbit(grid[0, 0], grid[1, 0], result)
-        _draw_errors(grid[0, 1], result)
-        _draw_invariants(grid[1, 1], result)
-        word = VERDICTS[result.verdict][0]
+    style: Any = {
+        "font.size": 9.5, "axes.titlesize": 10.5, "legend.fontsize": 9,
+        "axes.spines.top": False, "axes.spines.right": False,
+    }  # fmt: skip
+    with mpl.rc_context(style):
+        rows: Any = _panels(result.comparison)
+        figure = Figure(figsize=(8.6, 3.4 * len(rows) + 0.4), layout="constrained")
+        FigureCanvasAgg(figure)
+        axes = figure.subplot_mosaic(rows, height_ratios=[1.25, *([1.0] * (len(rows) - 1))])
+        clock = _Clock(result)
+        draw_orbit(axes["plane"], axes["side"], result)
+        _draw_errors(axes["errors"], result, clock)
+        if "rates" in axes:
+            _draw_rates(axes["rates"], result, clock)
+        if "invariants" in axes:
+            _draw_invariants(axes["invariants"], result, clock)
         assert result.orbit is not None
-        figure.suptitle(f"{result.name}: {word}   ({result.orbit.orbit_class})", fontsize=12)
+        word = VERDICTS[result.verdict][0]
+        title = (
+            f"{_plain(result.name)}: {word}  ({result.orbit.orbit_class}, {result.orbit.particle})"
+        )
+        figure.suptitle(title, fontsize=12, fontweight="bold")
         path = directory / f"{stem}.png"
-        figure.savefig(path, dpi=110, metadata={"Software": "truefall"})
+        figure.savefig(path, dpi=140, metadata={"Software": "truefall"})
     return [path]
+
+
+def _plain(name: str) -> str:
+    """A name that the text layout takes literally: no mathematics, no control characters."""
+    return "".join(c if c.isprintable() else "?" for c in name).replace("$", r"\$")
