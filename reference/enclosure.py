@@ -108,6 +108,20 @@ class Enclosure:
         """Reading since the start (GM/c^3) and kind of the end towards future or past."""
         return self.first_that(lambda s: s.end(clock, delta), lambda _: True)
 
+    def reaches(self, clock: str, elapsed: list[fmpq]) -> bool:
+        """Whether the orbit certainly reaches all of these times; False may mean "too close"."""
+        for precision in PRECISIONS[:2]:
+            with working(precision):
+                try:
+                    for time in elapsed:
+                        self.solution(precision).at(clock, time)
+                except _RETRY:
+                    continue
+                except BeyondEnd:
+                    return False
+                return True
+        return self.end(clock, 1) is None and self.end(clock, -1) is None
+
     def samples(self, clock: str, elapsed: list[fmpq], digits: int) -> list[Sample]:
         """The orbit at exact elapsed times (GM/c^3), each at the precision it needs."""
         found: dict[int, Sample] = {}

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from fractions import Fraction
 from functools import cached_property
+from math import inf
 
 import numpy as np
 import numpy.typing as npt
@@ -258,7 +259,9 @@ class Orbit:
                 0.0 if kind is LegEnd.CENTRE else ball_to_float(2 * arb(rational(self._length)))
             )
         if kind is LegEnd.CENTRE:
-            reason = "r = 0"
+            reason, radius = "r = 0", 0.0
+        elif kind is LegEnd.INFINITY:
+            reason, radius = "the past edge of the ingoing chart (past null infinity)", inf
         elif self.chart in INGOING:
             reason = "the past edge of the ingoing chart (the past horizon, r = 2 GM/c^2)"
         else:
@@ -289,9 +292,10 @@ class Orbit:
         """
         stamps = self._stamps(times)
         inside = np.ones(stamps.shape, dtype=bool)
+        extremes = [self._elapsed(t) for t in {stamps.min(), stamps.max()}] if stamps.size else []
+        if self._enclosure.reaches(self._engine_clock, extremes):
+            return inside  # the usual case, without looking for the ends
         limits = {d: e[0] for d, e in self._ends.items() if e is not None}
-        if not limits:
-            return inside
         with working(512):
             for k, t in enumerate(stamps):
                 elapsed = arb(self._elapsed(t))

@@ -139,7 +139,7 @@ class Flow:
         return (self.energy - w) / (u2 * gap)
 
     # -- series ------------------------------------------------------------------------------
-    def germ(self, u: arb, v: arb) -> Germ:
+    def germ(self, u: arb, v: arb, scale: int | None = None) -> Germ:
         """Taylor coefficients about a point, with a majorant for all that are left out.
 
         With ``z = u - u_0``: ``z'' = A + B z + 3 L^2 z^2``, ``B = L^2 (6 u_0 - 1)``.  If
@@ -149,7 +149,7 @@ class Flow:
         the disc as large as the slow motion there.
         """
         n = self.order
-        scale = self._scale(u, v)
+        scale = self._scale(u, v) if scale is None else scale
         step = arb((1, scale))
         square = step * step
         momentum2 = self.momentum2 * square

@@ -18,6 +18,7 @@ from truefall.reference.exact.centre import Centre
 from truefall.reference.exact.disc import TooSmall
 from truefall.reference.exact.field import to_ball
 from truefall.reference.exact.flow import CLOCKS, Flow
+from truefall.reference.exact.infinity import Infinity
 from truefall.reference.exact.segment import NotCovered, Point, Taylor
 
 __all__ = ["BeyondEnd", "Leg", "LegEnd", "Place"]
@@ -124,10 +125,17 @@ class Leg:
             return Approach(self.flow, delta=self.delta, side=-self.direction, regular=self.regular)
         if self.end is LegEnd.CENTRE:
             return Centre(self.flow)
+        if self.end is LegEnd.INFINITY and self._leaves_infinity_late():
+            return Infinity(self.flow)
         if self.end is LegEnd.HORIZON:
             v = self.direction * abs(self.flow.energy)
             return self._taylor(arb(1) / 2, v, at_horizon=True)
         return None
+
+    def _leaves_infinity_late(self) -> bool:
+        """Ingoing light leaves infinity at a finite Eddington-Finkelstein time."""
+        chart, light = self.flow.chart, not self.flow.mu
+        return chart == "eddington-finkelstein" and light and self.regular and self.delta < 0
 
     # -- growing -----------------------------------------------------------------------------
     def _push(
@@ -150,7 +158,7 @@ class Leg:
         if isinstance(piece, Approach):
             return
         for name in CLOCKS:
-            if isinstance(piece, Taylor) and piece.clocks[name].residue:
+            if isinstance(piece, Taylor) and piece.endless(name):
                 continue
             joint.right[name] = joint.clocks[name] + piece.clock(name, joint.last)
             self.rights[name].append(joint.right[name].mid())
@@ -274,14 +282,12 @@ class Leg:
 
     def _refuse_or_edge(self, name: str, target: arb) -> None:
         last = self.joints[-1].right[name]
-        if self.end in (LegEnd.HORIZON, LegEnd.CENTRE) and not target < last:
-            raise BeyondEnd(last, self.end)
-        if target > last and self.end is not LegEnd.TURN:
+        if self.end is not LegEnd.TURN and not target < last:
             raise BeyondEnd(last, self.end)
 
     def end_reading(self, name: str) -> arb | None:
         """The clock's reading where the leg ends, or None if it never ends in this clock."""
-        if self.end not in (LegEnd.HORIZON, LegEnd.CENTRE):
+        if self.final is None or self.end in (LegEnd.TURN, LegEnd.CIRCLE):
             return None
         self.complete()
         return self.joints[-1].right.get(name)

@@ -131,6 +131,10 @@ class Taylor:
         slope = arb_poly(disc.series.coeffs())
         return ClockSeries(slope.integral(), slope, pow2_ball(tail), residue)
 
+    def endless(self, name: str) -> bool:
+        """Whether a clock runs on for ever towards the piece's end at ``x = 0``."""
+        return bool(self.clocks[name].residue)
+
     # -- evaluation --------------------------------------------------------------------------
     def covers(self, x: arb) -> bool:
         return bool(abs(x) <= self.h)
