@@ -4,12 +4,19 @@ from __future__ import annotations
 
 import json
 import os
+import signal
 import sys
-from typing import Any
+from typing import TYPE_CHECKING, Any, NoReturn
 
 import click
 
 from truefall.validate.errors import InputError, UsageError
+from truefall.validate.terminal import prepare_streams, say, silence, working
+
+if TYPE_CHECKING:
+    from collections.abc import Callable
+
+    from truefall.validate.check import CheckResult
 
 __all__ = ["cli", "main"]
 
@@ -17,6 +24,9 @@ _SYSTEMS = ("geometric", "SI", "astronomical")
 _CHARTS = (
     "areal", "isotropic", "harmonic", "kerr-schild", "painleve-gullstrand",
     "eddington-finkelstein",
+)  # fmt: skip
+_LIBRARIES = (
+    "numpy", "scipy", "numba", "h5py", "python-flint", "matplotlib", "click", "rich", "pyarrow",
 )  # fmt: skip
 FAULT, INTERRUPTED = 70, 130
 
@@ -44,14 +54,31 @@ def _versions(ctx: click.Context, _param: click.Parameter, value: bool) -> None:
     import platform
     from importlib.metadata import PackageNotFoundError, version
 
-    click.echo(f"truefall {version('truefall')}")
-    click.echo(f"python {platform.python_version()} on {platform.system()} {platform.machine()}")
-    for name in ("numpy", "scipy", "numba", "h5py", "python-flint", "matplotlib", "pyarrow"):
+    say(f"truefall {version('truefall')}")
+    say(f"python {platform.python_version()} on {platform.system()} {platform.machine()}")
+    for name in _LIBRARIES:
         try:
-            click.echo(f"{name} {version(name)}")
+            inside = f" ({inner})" if (inner := _bundled(name)) else ""
+            say(f"{name} {version(name)}{inside}")
         except PackageNotFoundError:
-            click.echo(f"{name} not installed")
+            say(f"{name} not installed")
     ctx.exit()
+
+
+def _bundled(name: str) -> str:
+    """The C library that a Python package brings along, as it names it itself."""
+    try:
+        if name == "h5py":
+            import h5py
+
+            return f"HDF5 {h5py.version.hdf5_version}"
+        if name == "python-flint":
+            import flint
+
+            return f"FLINT {flint.__FLINT_VERSION__}"
+    except (ImportError, AttributeError):
+        return "its library cannot be loaded"
+    return ""
 
 
 @click.group(cls=_Commands, context_settings={"help_option_names": ["-h", "--help"]})
@@ -68,23 +95,6 @@ def cli() -> None:
     """
 
 
-def _colour(stream: Any) -> bool:
-    if os.environ.get("NO_COLOR"):
-        return False
-    if os.environ.get("FORCE_COLOR"):
-        return True
-    return bool(stream.isatty()) and os.environ.get("TERM") != "dumb"
-
-
-def _say(text: str, *, err: bool = False, colour: str | None = None) -> None:
-    stream = sys.stderr if err else sys.stdout
-    if colour and _colour(stream):
-        head, newline, rest = text.partition("\n")
-        word, gap, tail = head.partition("  ")
-        text = click.style(word, fg=colour, bold=True) + gap + tail + newline + rest
-    click.echo(text, err=err, color=_colour(stream))
-
-
 def _overrides(options: dict[str, Any]) -> dict[str, Any]:
     found: dict[str, Any] = {
         k: options[k]
@@ -96,16 +106,40 @@ def _overrides(options: dict[str, Any]) -> dict[str, Any]:
     return found
 
 
-def _declarations(command: Any) -> Any:
+class _Number(click.ParamType):
+    """A finite number, positive where that is demanded."""
+
+    name = "number"
+
+    def __init__(self, *, positive: bool = False) -> None:
+        self.positive = positive
+
+    def convert(
+        self, value: Any, param: click.Parameter | None, ctx: click.Context | None
+    ) -> float:
+        """The float64, or a usage error."""
+        import math
+
+        try:
+            result = float(value)
+        except ValueError:
+            result = math.nan
+        if not math.isfinite(result) or (self.positive and result <= 0):
+            kind = "a positive finite number" if self.positive else "a finite number"
+            self.fail(f"{value!r} is not {kind}", param, ctx)
+        return result
+
+
+def _declarations(command: Callable[..., int]) -> Callable[..., int]:
     """Options that say what a file does not say about itself."""
     for option in (
-        click.option("--start-time", type=float, help="Reading of the clock at the start."),
+        click.option("--start-time", type=_Number(), help="Reading of the clock at the start."),
         click.option(
             "--clock", type=click.Choice(("coordinate", "proper")), help="What time means."
         ),
         click.option("--chart", type=click.Choice(_CHARTS), help="Coordinates of the file."),
         click.option("--particle", type=click.Choice(("massive", "light")), help="What moves."),
-        click.option("--gm", type=float, help="GM in the system's units."),
+        click.option("--gm", type=_Number(positive=True), help="GM in the system's units."),
         click.option("--system", type=click.Choice(_SYSTEMS), help="Unit system of the file."),
     ):
         command = option(command)
@@ -143,35 +177,74 @@ def check(
         parse_orbit(
             {**read_mapping(orbit_file), **_overrides(options)}, orbit_file, need_start=False
         )
-    from truefall.validate.check import CheckResult, check_file, exit_status
-    from truefall.validate.report.text import VERDICTS, explain_residual, render
+    from truefall.validate.check import exit_status
 
+    given = {"orbit_file": orbit_file, "overrides": _overrides(options), "budget": table,
+             "against": against, "fit": fit}  # fmt: skip
     results: list[CheckResult] = []
-    for path in files:
-        found = check_file(
-            path,
-            orbit_file=orbit_file,
-            overrides=_overrides(options),
-            budget=table,
-            against=against,
-            fit=fit,
-        )
+    faulty = False
+    for number, path in enumerate(files, 1):
+        count = f" ({number} of {len(files)})" if len(files) > 1 else ""
+        with working(f"checking {path}{count}"):
+            found, fault = _check_one(path, given)
+        faulty = faulty or fault
         results += found
         for result in found:
-            text = render(result)
-            if explain:
-                text += "\n" + explain_residual(result)
-            _say(text, err=as_json, colour=VERDICTS[result.verdict][1])
+            _show(result, explain=explain, err=as_json)
     if report is not None:
         from truefall.validate.report import write_report
 
-        for written in write_report(results, report):
-            _say(f"wrote {written}", err=True)
+        with working("writing the report"):
+            paths = write_report(results, report)
+        for written in paths:
+            say(f"wrote {written}", err=True)
     if as_json:
         from truefall.validate.report.document import document
 
-        click.echo(json.dumps(document(results), indent=1, allow_nan=False))
-    return exit_status(results)
+        say(json.dumps(document(results), indent=1, allow_nan=False))
+    return FAULT if faulty else exit_status(results)
+
+
+def _check_one(path: str, given: dict[str, Any]) -> tuple[list[CheckResult], bool]:
+    """The results for one file, and whether truefall itself failed at it.
+
+    A fault at one file must not keep the others from being judged.
+    """
+    from pathlib import Path
+
+    from truefall.validate.check import CheckResult, check_file
+
+    try:
+        return check_file(path, **given), False
+    except (UsageError, InputError):
+        raise
+    except Exception as error:
+        return [CheckResult(path, Path(path).stem, "unusable", _fault(error))], True
+
+
+def _show(result: CheckResult, *, explain: bool, err: bool) -> None:
+    from truefall.validate.report.text import VERDICTS, explain_residual, render
+
+    text = render(result)
+    if explain:
+        text += "\n" + explain_residual(result)
+    say(text, err=err, colour=VERDICTS[result.verdict][1])
+
+
+def _writable(target: str) -> None:
+    """Refuse an output that cannot be, before anything is computed."""
+    from pathlib import Path
+
+    from truefall.validate.formats import suffix_of
+
+    try:
+        suffix_of(target)
+    except InputError as error:
+        raise UsageError(f"the output {error}") from None
+    if Path(target).is_dir():
+        raise InputError("is a folder; name a file to write", target)
+    if not Path(target).absolute().parent.is_dir():
+        raise InputError("cannot be written: there is no such folder; make it first", target)
 
 
 @cli.command()
@@ -192,20 +265,24 @@ def make(
     """Write a reference trajectory at exactly the times of an orbit file."""
     if (orbit_file is None) == (case_name is None):
         raise UsageError("make needs an orbit file, or --case NAME, and not both")
-    from truefall.validate.formats import suffix_of
+    _writable(out)
+    if certified and not out.lower().endswith((".h5", ".hdf5")):
+        raise UsageError(f"--certified needs HDF5 (.h5), the only format with bounds, not {out}")
     from truefall.validate.make import make as make_file
     from truefall.validate.orbit_file import read_orbit_file
 
-    suffix_of(out)
     if case_name is not None:
         from truefall.validate.cases import case
 
         spec = case(case_name).spec
     else:
         spec = read_orbit_file(str(orbit_file), need_samples=True)
-    made = make_file(spec, out, truncate=truncate, certified=certified, reproducible=reproducible)
+    with working(f"making {out}"):
+        made = make_file(
+            spec, out, truncate=truncate, certified=certified, reproducible=reproducible
+        )
     note = f"; {made.end_note}" if made.end_note else ""
-    _say(f"wrote {made.path}: {made.rows} rows, {made.orbit_class} orbit{note}", err=True)
+    say(f"wrote {made.path}: {made.rows} rows, {made.orbit_class} orbit{note}", err=True)
     return 0
 
 
@@ -219,15 +296,15 @@ def convert(
     source: str, target: str, orbit_file: str | None, reproducible: bool, **options: Any
 ) -> int:
     """Convert a trajectory between CSV, HDF5, NPZ, Parquet and OEM."""
-    from truefall.validate.formats import read_trajectories, suffix_of, write_trajectory
+    _writable(target)
+    from truefall.validate.formats import read_trajectories, write_trajectory
 
-    suffix_of(target)
     found = read_trajectories(source, overrides=_overrides(options), orbit_file=orbit_file)
     if len(found) != 1:
         names = ", ".join(t.name for t in found)
         raise InputError(f"holds {len(found)} trajectories ({names}); convert takes one", source)
     write_trajectory(target, found[0], reproducible=reproducible)
-    _say(f"wrote {target}: {len(found[0])} rows", err=True)
+    say(f"wrote {target}: {len(found[0])} rows", err=True)
     return 0
 
 
@@ -239,7 +316,7 @@ def cases(show: str | None, as_json: bool) -> int:
     from truefall.validate.cases import case, load_cases, show_case
 
     if show is not None:
-        _say(show_case(case(show)))
+        say(show_case(case(show)))
         return 0
     catalogue = load_cases()
     if as_json:
@@ -248,12 +325,12 @@ def cases(show: str | None, as_json: bool) -> int:
              "why": c.why, "samples": len(c.spec.times or ())}
             for c in catalogue
         ]  # fmt: skip
-        click.echo(json.dumps(rows, indent=1))
+        say(json.dumps(rows, indent=1))
         return 0
     wide = max(len(c.name) for c in catalogue)
     for c in catalogue:
-        _say(f"{c.name:<{wide}}  {c.orbit_class:<17}  {c.title}")
-    _say(f"\n{len(catalogue)} cases; truefall cases --show NAME tells the story of one")
+        say(f"{c.name:<{wide}}  {c.orbit_class:<17}  {c.title}")
+    say(f"\n{len(catalogue)} cases; truefall cases --show NAME tells the story of one")
     return 0
 
 
@@ -263,37 +340,61 @@ def demo(directory: str) -> int:
     """The main job end to end on invented data; leaves a folder to look at."""
     from truefall.validate.demo import run_demo
 
-    run_demo(directory, lambda text: _say(text))
+    run_demo(directory)
     return 0
+
+
+def _fault(error: BaseException) -> str:
+    """One sentence for a fault of truefall; with TRUEFALL_DEBUG also the traceback, at once."""
+    if os.environ.get("TRUEFALL_DEBUG"):
+        import traceback
+
+        say("".join(traceback.format_exception(error)), err=True)
+    return (
+        f"a fault of truefall itself: {type(error).__name__}: {error}; please report it to the "
+        "project with the input and the output of truefall --version (TRUEFALL_DEBUG=1 shows "
+        "the traceback)"
+    )
+
+
+def _terminated(_number: int, _frame: object) -> NoReturn:
+    """Leave by an exception, so that unfinished files are removed on the way."""
+    raise SystemExit(128 + signal.SIGTERM)
 
 
 def main(args: list[str] | None = None) -> None:
     """Run the command line and exit with the documented status."""
+    prepare_streams()
+    signal.signal(signal.SIGTERM, _terminated)
     try:
         status = cli.main(args=args, prog_name="truefall", standalone_mode=False)
-        sys.stdout.flush()
     except click.exceptions.Exit as error:
         status = error.exit_code
-    except click.ClickException as error:
+    except click.exceptions.NoArgsIsHelpError as error:
         error.show()
         status = 2
+    except click.ClickException as error:
+        say(f"truefall: {error.format_message()}; see {_help_of(error)}", err=True)
+        status = 2
     except (UsageError, InputError) as error:
-        click.echo(f"truefall: {error}", err=True)
+        say(f"truefall: {error}", err=True)
         status = error.status
     except (KeyboardInterrupt, click.Abort):
-        click.echo("truefall: interrupted", err=True)
+        say("truefall: interrupted", err=True)
         status = INTERRUPTED
     except BrokenPipeError:
-        # the reader of a pipe left: nothing more can be said there
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-        status = 141
+        silence(sys.stdout)
+        status = 0
     except Exception as error:
-        if os.environ.get("TRUEFALL_DEBUG"):
-            raise
-        click.echo(
-            f"truefall: a fault of truefall itself: {type(error).__name__}: {error}; please report "
-            "it with the input (TRUEFALL_DEBUG=1 shows the traceback)",
-            err=True,
-        )
+        say(f"truefall: {_fault(error)}", err=True)
         status = FAULT
+    try:
+        sys.stdout.flush()
+    except BrokenPipeError:
+        silence(sys.stdout)
     sys.exit(status if isinstance(status, int) else 0)
+
+
+def _help_of(error: click.ClickException) -> str:
+    context = getattr(error, "ctx", None)
+    return f"{context.command_path if context else 'truefall'} --help"
