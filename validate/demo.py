@@ -1,218 +1,235 @@
 """``truefall demo``: the main job end to end, on data invented for it.
 
-A survey ship keeps station off Corrow, a compact remnant; its probes' paths come from six
-versions of a small in-house propagator, most of them wrong in a way that happens.
+The survey ship Halden keeps station off Corrow, a compact remnant.  Its probes' paths, and one
+satellite at home, come from versions of a small in-house propagator: two good ones, the others
+wrong in a way that happens.  Every verdict is known beforehand, and the demo says so if one
+comes out otherwise.
 """
 
 from __future__ import annotations
 
-import html
 import math
-from collections.abc import Callable
+from collections.abc import Iterator
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING
 
+from truefall.validate import demo_propagator as inhouse
+from truefall.validate.demo_page import Chapter, page
 from truefall.validate.errors import InputError
+from truefall.validate.terminal import say, working
 
-__all__ = ["run_demo"]
+if TYPE_CHECKING:
+    from truefall.validate.check import CheckResult
 
-State = tuple[float, float, float, float, float]
-Force = Callable[[float, float, float], tuple[float, float]]
+__all__ = ["STORIES", "Story", "run_demo"]
 
-
-def _geodesic(r: float, rdot: float, phidot: float) -> tuple[float, float]:
-    """Areal geodesic in chart time: second derivatives of r and phi (particles and light)."""
-    f = 1.0 - 2.0 / r
-    return (
-        r * f * phidot**2 - f / r**2 + 3.0 * rdot**2 / (f * r**2),
-        -2.0 * rdot * phidot / r * (1.0 - 1.0 / (r * f)),
-    )
-
-
-def _newton(r: float, rdot: float, phidot: float) -> tuple[float, float]:
-    """The same with relativity forgotten."""
-    return r * phidot**2 - 1.0 / r**2, -2.0 * rdot * phidot / r
-
-
-def _rate(state: State, force: Force) -> State:
-    r, _, rdot, phidot, _ = state
-    f = 1.0 - 2.0 / r
-    dtau2 = f - rdot**2 / f - (r * phidot) ** 2
-    a, b = force(r, rdot, phidot)
-    return rdot, phidot, a, b, math.sqrt(max(dtau2, 0.0))
-
-
-def _step(state: State, h: float, force: Force) -> State:
-    """One step of the classical fourth-order Runge-Kutta method."""
-
-    def shifted(k: State, w: float) -> State:
-        a, b, c, d, e = (s + w * x for s, x in zip(state, k, strict=True))
-        return a, b, c, d, e
-
-    k1 = _rate(state, force)
-    k2 = _rate(shifted(k1, h / 2), force)
-    k3 = _rate(shifted(k2, h / 2), force)
-    k4 = _rate(shifted(k3, h), force)
-    a, b, c, d, e = (
-        s + h / 6 * (p + 2 * q + 2 * u + v)
-        for s, p, q, u, v in zip(state, k1, k2, k3, k4, strict=True)
-    )
-    return a, b, c, d, e
-
-
-def _propagate(
-    position: list[float], velocity: list[float], rows: int, span: float, steps: int, force: Force
-) -> list[list[float]]:
-    """Rows time, x, y, z, vx, vy, vz, proper time from an orbit in the plane z = 0."""
-    x, y = position[:2]
-    r = math.hypot(x, y)
-    rdot = (x * velocity[0] + y * velocity[1]) / r
-    phidot = (x * velocity[1] - y * velocity[0]) / r**2
-    state: State = (r, math.atan2(y, x), rdot, phidot, 0.0)
-    out = []
-    h = span / (rows - 1) / steps
-    for k in range(rows):
-        r, phi, rdot, phidot, tau = state
-        c, s = math.cos(phi), math.sin(phi)
-        out.append(
-            [k * steps * h, r * c, r * s, 0.0, rdot * c - r * phidot * s, rdot * s + r * phidot * c,
-             0.0, tau]
-        )  # fmt: skip
-        for _ in range(steps):
-            state = _step(state, h, force)
-    return out
+#: The demo's propagator keeps constants of its own, as codes under test do.
+_C = 299792458.0
+_EARTH = 3.986004418e14
 
 
 @dataclass(frozen=True)
-class _Story:
+class Story:
+    """A version of the propagator, what it was set to do, and the verdict that it deserves.
+
+    ``position`` and ``velocity`` are (2,), in the plane z = 0, in the units of ``system``;
+    ``interval`` between rows likewise.  ``digits`` below 17 cut the coordinates as written.
+    """
+
     name: str
     text: str
-    position: list[float]
-    velocity: list[float]
-    span: float
+    verdict: str
+    position: tuple[float, float]
+    velocity: tuple[float, float]
     rows: int
+    interval: float
     steps: int
-    budget: float
-    force: Force = _geodesic
+    budget: str
+    system: str = "geometric"
+    gm: float = 1.0
+    chart: str = "areal"
     particle: str = "massive"
+    force: inhouse.Force = inhouse.geodesic
+    shift: float = 0.0
     proper_stamps: bool = False
     digits: int = 17
 
 
-_TERN = ([14.0, 0.0, 0.0], [0.0, 0.23, 0.0])
-_STORIES = (
-    _Story("tern-fine", "the release version of the propagator", *_TERN, 1500.0, 601, 20, 1e-6),
-    _Story("tern-coarse", "the same with a step twenty times as long", *_TERN, 1500.0, 601, 1,
-           1e-6),
-    _Story("tern-newton", "relativity switched off by a forgotten flag", *_TERN, 1500.0, 601, 20,
-           1e-6, force=_newton),
-    _Story("tern-ship-time", "time stamps taken from the ship's own clock", *_TERN, 1500.0, 601, 20,
-           1e-6, proper_stamps=True),
-    _Story("tern-short-digits", "written with seven digits, judged to 1e-6", *_TERN, 120.0, 121, 20,
-           1e-6, digits=7),
-    _Story("lamp-half-bending", "a light ray bent by the Newtonian half only", [-60.0, 9.0, 0.0],
-           [1.0, 0.0, 0.0], 140.0, 281, 20, 1e-6, force=_newton, particle="light"),
+def _tern(name: str, text: str, verdict: str, **changes: object) -> Story:
+    settings: dict[str, object] = {
+        "position": (14.0, 0.0), "velocity": (0.0, 0.245), "rows": 601, "interval": 2.5,
+        "steps": 20, "budget": "1e-6",
+    }  # fmt: skip
+    return Story(name, text, verdict, **{**settings, **changes})  # type: ignore[arg-type]
+
+
+def _satellite(name: str, text: str, verdict: str, shift: float) -> Story:
+    return Story(
+        name, text, verdict, (7.2e6, 0.0), (120.0, 7400.0), 289, 300.0, 150, "1 mm",
+        system="SI", gm=_EARTH, chart="harmonic", shift=shift,
+    )  # fmt: skip
+
+
+STORIES = (
+    _tern("tern-release", "probe Tern, the released propagator", "pass"),
+    _tern("tern-coarse", "the same with steps twenty times as long", "fail", steps=1),
+    _tern("tern-newton", "relativity switched off by a forgotten flag", "fail",
+          force=inhouse.newton),
+    _tern("tern-ship-time", "time stamps read from the ship's own clock", "fail",
+          proper_stamps=True),
+    _tern("tern-few-digits", "a good run written with seven digits, budget 1e-6", "undecided",
+          digits=7),
+    Story("lamp-half-bent", "a light ray that only Newton's half of the bending turns", "fail",
+          (-60.0, 9.0), (1.0, 0.0), 281, 0.5, 20, "1e-6", force=inhouse.newton, particle="light"),
+    _satellite("beacon-release", "a satellite of the Earth, in metres, for a day", "pass", 1.0),
+    _satellite("beacon-charts", "harmonic coordinates taken for areal ones: GM/c^2 is 4.4 mm",
+               "fail", 0.0),
 )  # fmt: skip
 
 
-def _write_inputs(story: _Story, folder: Path) -> Path:
-    """The orbit file and the trajectory file of a story."""
-    from truefall.reference import Orbit
+def _rows(story: Story) -> Iterator[list[float]]:
+    """Rows time, x, y, z, vx, vy, vz in the units of the story's system.
 
-    velocity = story.velocity
+    ``shift`` is what the propagator adds to the chart's radius to get the areal one, in
+    GM/c^2: 1 is right for the harmonic chart.
+    """
+    unit = 1.0 if story.system == "geometric" else story.gm / _C**2
+    speed = 1.0 if story.system == "geometric" else _C
+    x, y = (p / unit for p in story.position)
+    vx, vy = (v / speed for v in story.velocity)
+    rho = math.hypot(x, y)
+    # a point moved outward by the shift; the tangential speed grows with the radius
+    scale = (rho + story.shift) / rho
+    radial = (x * vx + y * vy) / rho**2
+    velocity = (vx * scale - radial * x * (scale - 1.0), vy * scale - radial * y * (scale - 1.0))
     if story.particle == "light":
-        orbit = Orbit(particle="light", position=story.position, velocity=velocity)
-        velocity = list(orbit.velocity_used)
-    table = _propagate(story.position, velocity, story.rows, story.span, story.steps, story.force)
-    sidecar = [
-        f'name     = "{story.name}"',
-        'system   = "geometric"',
-        "gm       = 1.0",
-        f'particle = "{story.particle}"',
-        'chart    = "areal"',
-        'clock    = "coordinate"',
-        "[start]",
-        f"position = {story.position}",
-        f"velocity = {story.velocity}",
-        "[budget]",
-        f"position = {story.budget}",
-    ]
-    (folder / f"{story.name}.toml").write_text("\n".join(sidecar) + "\n", encoding="utf-8")
-    path = folder / f"{story.name}.csv"
+        velocity = inhouse.light_speed(x, y, vx, vy)
+    path = inhouse.propagate(
+        (x * scale, y * scale),
+        velocity,
+        rows=story.rows,
+        interval=story.interval * speed / unit,
+        steps=story.steps,
+        force=story.force,
+    )
+    for k, row in enumerate(path):
+        r = math.hypot(*row.position)
+        back = (r - story.shift) / r
+        out = sum(p * v for p, v in zip(row.position, row.velocity, strict=True)) / r**2
+        place = [p * back * unit for p in row.position]
+        motion = [
+            (v * back + out * p * (1.0 - back)) * speed
+            for p, v in zip(row.position, row.velocity, strict=True)
+        ]
+        yield [row.proper_time if story.proper_stamps else k * story.interval, *place, *motion]
+
+
+def _write_inputs(story: Story, folder: Path) -> Path:
+    """The orbit file (also the sidecar) and the trajectory file of a story."""
+    budget = story.budget if story.system == "geometric" else f'"{story.budget}"'
+    samples = f"first = 0.0\nlast = {story.interval * (story.rows - 1)!r}\ncount = {story.rows}"
+    orbit = (
+        f'# {story.text}\nname = "{story.name}"\nsystem = "{story.system}"\ngm = {story.gm!r}\n'
+        f'particle = "{story.particle}"\nchart = "{story.chart}"\nclock = "coordinate"\n\n'
+        f"[start]\nposition = {[*story.position, 0.0]}\nvelocity = {[*story.velocity, 0.0]}\n\n"
+        f"[samples]\n{samples}\n\n[budget]\nposition = {budget}\n"
+    )
+    (folder / f"{story.name}.toml").write_text(orbit, encoding="utf-8")
     lines = ["time,x,y,z,vx,vy,vz"]
-    for row in table:
-        stamp = row[7] if story.proper_stamps else row[0]
-        numbers = [stamp, *row[1:7]]
+    for stamp, *numbers in _rows(story):
         if story.digits < 17:
-            texts = [repr(stamp), *(f"{v:.{story.digits - 1}e}" for v in row[1:7])]
+            texts = [f"{value:.{story.digits - 1}e}" for value in numbers]
         else:
-            texts = [repr(v) for v in numbers]
-        lines.append(",".join(texts))
+            texts = [repr(value) for value in numbers]
+        lines.append(",".join([repr(stamp), *texts]))
+    path = folder / f"{story.name}.csv"
     path.write_text("\n".join(lines) + "\n", encoding="utf-8")
     return path
 
 
-_PAGE = """<!doctype html>
-<html lang="en"><head><meta charset="utf-8"><title>truefall demo</title>
-<meta name="viewport" content="width=device-width, initial-scale=1">
-<style>
-:root {{ color-scheme: light dark; }}
-body {{ font: 16px/1.5 system-ui, sans-serif; max-width: 60rem; margin: 2rem auto;
-        padding: 0 1rem; }}
-img {{ max-width: 100%; height: auto; background: white; }}
-pre {{ overflow-x: auto; font-size: .85rem; }}
-h2 {{ margin-top: 2.5rem; }}
-</style></head><body>
-<h1>Six versions of one propagator</h1>
-<p>Invented data: probes of a survey ship that keeps station off Corrow, a compact remnant. Every
-file was judged by <code>truefall check</code> against the exact solution at its own time
-stamps.</p>
-{parts}
-</body></html>
-"""
+def _prepare(directory: str | Path) -> Path:
+    folder = Path(directory)
+    if folder.exists() and not folder.is_dir():
+        raise InputError("is a file; name a folder for the demo", folder)
+    try:
+        foreign = folder.exists() and any(folder.iterdir()) and not (folder / "input").is_dir()
+        if foreign:
+            raise InputError("is a folder with other things in it; name a new one", folder)
+        (folder / "input").mkdir(parents=True, exist_ok=True)
+    except OSError as error:
+        raise InputError(f"cannot be written ({error.strerror or error})", folder) from None
+    return folder
 
 
-def run_demo(directory: str | Path, say: Callable[[str], Any]) -> None:
+def _tell(story: Story, folder: Path, count: str) -> tuple[Chapter, CheckResult]:
+    """Write, judge and report one story; its chapter of the page."""
+    from truefall.validate.check import check_file
+    from truefall.validate.report import write_report
+    from truefall.validate.report.text import VERDICTS, render, units_of
+
+    with working(f"{count}  {story.name}: propagating"):
+        path = _write_inputs(story, folder / "input")
+    with working(f"{count}  {story.name}: checking and drawing"):
+        results = check_file(path)
+        pictures = [p for p in write_report(results, folder / story.name) if p.suffix == ".png"]
+    result = results[0]
+    word, colour = VERDICTS[result.verdict]
+    error = "no rows to compare"
+    if result.comparison is not None:
+        unit = units_of(story.system)["length"]
+        error = f"largest position error {result.comparison.distance.max():.1e} {unit}"
+    say(f"{word:<10}  {count}  {story.name}: {story.text}", colour=colour)
+    tolerance = story.budget if story.system == "SI" else f"{story.budget} GM/c^2"
+    say(f"{'':10}       {error}, budget {tolerance}")
+    links = tuple(f"{story.name}/{p.name}" for p in pictures)
+    return Chapter(story.name, word, story.text, links, render(result)), result
+
+
+def run_demo(directory: str | Path) -> None:
     """Write the demo's files into a folder, judge them, and leave the reports there.
 
     Raises
     ------
     InputError
         If the folder holds other things already or cannot be written.
+    ArithmeticError
+        If a verdict is not the one that the story deserves.
     """
-    folder = Path(directory)
-    marker = folder / "index.html"
-    if folder.exists() and any(folder.iterdir()) and not marker.exists():
-        raise InputError("is a folder with other things in it; name a new one", folder)
-    try:
-        (folder / "input").mkdir(parents=True, exist_ok=True)
-    except OSError as error:
-        raise InputError(f"cannot be written ({error.strerror or error})", folder) from None
-    from truefall.validate.check import check_file
-    from truefall.validate.report import write_report
-    from truefall.validate.report.text import VERDICTS, render
-
-    say("The survey ship keeps station off Corrow. Six paths, six versions of its propagator:\n")
-    parts = []
-    for number, story in enumerate(_STORIES, 1):
-        path = _write_inputs(story, folder / "input")
-        results = check_file(path)
-        result = results[0]
-        write_report(results, folder / story.name)
-        word = VERDICTS[result.verdict][0]
-        largest = "" if result.comparison is None else f"{result.comparison.distance.max():.1e}"
-        say(f"{number}/{len(_STORIES)}  {word:<10} {story.name:<18} {story.text}")
-        say(f"{'':16}largest position error {largest}, budget {story.budget:.0e} GM/c^2")
-        title = html.escape(f"{story.name}: {word}")
-        parts.append(
-            f"<h2>{title}</h2>\n<p>{html.escape(story.text.capitalize())}.</p>\n"
-            f'<img src="{story.name}/{story.name}.png" alt="{title}: orbit, errors, invariants">\n'
-            f"<pre>{html.escape(render(result))}</pre>"
-        )
-    marker.write_text(_PAGE.format(parts="\n".join(parts)), encoding="utf-8")
+    folder = _prepare(directory)
+    say("The survey ship Halden keeps station off Corrow, a compact remnant. Its paths come from\n"
+        "versions of one small propagator; each is held against the exact solution at its own\n"
+        "time stamps.\n")  # fmt: skip
+    chapters, surprises = [], []
+    for number, story in enumerate(STORIES, 1):
+        chapter, result = _tell(story, folder, f"{number}/{len(STORIES)}")
+        chapters.append(chapter)
+        if result.verdict != story.verdict:
+            surprises.append(f"{story.name} is {result.verdict}, not {story.verdict}")
+    made = _reference(folder)
+    (folder / "index.html").write_text(page(chapters), encoding="utf-8")
+    if surprises:
+        raise ArithmeticError(f"the demo did not come out as it must: {'; '.join(surprises)}")
     say(
-        f"\nThe files are in {folder}/input, pictures and reports beside them; open "
-        f"{marker}.\nYour own: write time,x,y,z,vx,vy,vz to a CSV file, say gm, chart and units in "
-        "a .toml\nof the same name, and run  truefall check FILE.csv --budget position=1e-6"
+        f"\nThe exact path of probe Tern with its proven bounds: {made}\n"
+        f"All verdicts with pictures: {folder / 'index.html'}\n\n"
+        "Again by hand, and then with a file of yours:\n"
+        f"  truefall check {folder / 'input' / 'tern-coarse.csv'} --explain\n"
+        f"  truefall make {folder / 'input' / 'tern-release.toml'} --out tern.csv\n"
+        "  truefall check YOURS.csv --system SI --gm 3.986004418e14 --particle massive \\\n"
+        "      --chart harmonic --clock coordinate --budget 'position=1 mm'\n"
+        "(columns time,x,y,z,vx,vy,vz; what the options say can stand in YOURS.toml instead)"
     )
+
+
+def _reference(folder: Path) -> Path:
+    """The exact trajectory that Tern's files should have held."""
+    from truefall.validate.make import make
+    from truefall.validate.orbit_file import read_orbit_file
+
+    target = folder / "reference" / "tern.h5"
+    target.parent.mkdir(exist_ok=True)
+    with working("making the reference"):
+        spec = read_orbit_file(folder / "input" / "tern-release.toml", need_samples=True)
+        make(spec, target, certified=True)
+    return target
