@@ -63,7 +63,7 @@ class Rounded:
 
 
 def round_ball(ball: arb) -> Rounded:
-    """Round a ball.  An exact zero (no radius) stays exactly zero."""
+    """Round a ball (inside the precision it was made at).  An exact zero stays exactly zero."""
     if ball.is_zero():
         return Rounded(0.0, 0.0, 0.0, True)
     value = _exact_to_float(ball.mid())
