@@ -227,6 +227,14 @@ def parse_budget_options(options: Sequence[str]) -> dict[str, Any]:
     return table
 
 
+def _excess(d: Floats, w: Floats, tolerance: Floats) -> Floats:
+    """A number with the sign of ``d + w - T``, without rounding (two-sum: Knuth 1969)."""
+    total = d + w
+    virtual = total - d
+    rest = (d - (total - virtual)) + (w - virtual)
+    return np.where(total == tolerance, rest, total - tolerance)
+
+
 def judge(
     quantity: str,
     tolerance: Floats,
@@ -248,8 +256,8 @@ def judge(
     """
     w = guard.total
     with np.errstate(invalid="ignore"):
-        passes = judged & (deviation + w <= tolerance)
-        fails = judged & (deviation - w > tolerance)
+        passes = judged & (_excess(deviation, w, tolerance) <= 0)
+        fails = judged & (_excess(deviation, -w, tolerance) > 0)
     undecided = ~passes & ~fails
     if fails.any():
         outcome, among = "fail", fails

@@ -36,7 +36,7 @@ _TIMES = 64
 _STEP = 2.0**-40
 #: Smallest move of a start component, in units in its last place; smaller half units scale it.
 _ULPS = 4.0
-#: Stands for "anywhere" where logarithms must stay finite.
+#: Stands for "anywhere" in place of infinity, so that JSON can hold it.
 _ANYWHERE = 1e300
 
 
@@ -103,6 +103,8 @@ def sensitivities(spec: OrbitSpec, orbit: Orbit, times: Floats) -> Floats:
         If a moved start is no orbit.
     """
     sizes = [float(np.linalg.norm(v)) for v in (orbit.position, orbit.velocity)]
+    if spec.elements is not None:  # whose state is not exactly a float64 one
+        orbit, _ = move_start(spec, orbit, 0, 0.0)
     base = orbit.at(times)
     columns = np.full((times.size, 3, 6), np.nan)
     for k in range(6):
@@ -147,8 +149,9 @@ def carried_spread(spec: OrbitSpec, orbit: Orbit, times: Floats, quantum: Floats
 
     Notes
     -----
-    At most 64 of the times are followed; between them the largest spread so far is
-    interpolated in its logarithm: an orbit does not forget.
+    At most 64 of the times are followed; between them the largest spread so far (an orbit
+    does not forget) is interpolated linearly, which is too much where it grows exponentially
+    and never much too little.
     """
     if not np.any(quantum):
         return Spread.none(times.size)
@@ -160,9 +163,8 @@ def carried_spread(spec: OrbitSpec, orbit: Orbit, times: Floats, quantum: Floats
     total = np.zeros((3, chosen.size))
     for k in np.flatnonzero(quantum):
         total += _component_spread(spec, orbit, base, int(k), float(quantum[k]))
-    worst = np.clip(np.maximum.accumulate(total, axis=1), 1.0 / _ANYWHERE, _ANYWHERE)
-    rows = [np.exp(np.interp(elapsed, elapsed[chosen], np.log(row))) for row in worst]
-    return Spread(*(np.where(row > 2.0 / _ANYWHERE, row, 0.0) for row in rows))
+    worst = np.minimum(np.maximum.accumulate(total, axis=1), _ANYWHERE)
+    return Spread(*(np.interp(elapsed, elapsed[chosen], row) for row in worst))
 
 
 def stamp_spread(orbit: Orbit, times: Floats, quantum: float) -> Spread:

@@ -1,0 +1,114 @@
+"""Trajectories made from exact orbits, in memory and as files, for the tests of the judge."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping, Sequence
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pytest
+
+from truefall.reference import Orbit
+from truefall.validate.trajectory import Trajectory
+
+CsvOf = Callable[..., Path]
+TrajectoryOf = Callable[..., Trajectory]
+
+
+def _columns(orbit: Orbit, times: Sequence[float], drop: Sequence[str]) -> dict[str, Any]:
+    states = orbit.at(times)
+    columns: dict[str, Any] = {"time": np.array(times, dtype=float)}
+    for names, values in (("xyz", states.position), (("vx", "vy", "vz"), states.velocity)):
+        if "velocity" in drop and names != "xyz":
+            continue
+        columns |= {name: values[:, k] for k, name in enumerate(names)}
+    for name in ("proper_time", "coordinate_time", "affine"):
+        wanted = name == "coordinate_time" or orbit.clock != "proper"
+        if getattr(states, name) is not None and name not in drop and wanted:
+            columns[name] = getattr(states, name)
+    return columns
+
+
+def _metadata(orbit: Orbit, start: bool) -> dict[str, Any]:
+    found: dict[str, Any] = {
+        key: getattr(orbit, key) for key in ("system", "gm", "particle", "chart", "clock")
+    }
+    if start:
+        found["start"] = {
+            "time": orbit.start_time,
+            "position": list(orbit.position),
+            "velocity": list(orbit.velocity),
+        }
+    return found
+
+
+@pytest.fixture
+def csv_of(tmp_path: Path) -> CsvOf:
+    """Write a CSV of an orbit: shortest form, or so many significant digits, errors added."""
+
+    def write(
+        orbit: Orbit,
+        times: Sequence[float],
+        *,
+        name: str = "run",
+        digits: int | None = None,
+        drop: Sequence[str] = (),
+        start: bool = False,
+        change: Callable[[dict[str, Any]], None] | None = None,
+    ) -> Path:
+        columns = _columns(orbit, times, drop)
+        if change is not None:
+            change(columns)
+        form = repr if digits is None else (lambda v: f"{v:.{digits - 1}e}")
+        lines = []
+        for key, value in _metadata(orbit, start).items():
+            if isinstance(value, dict):
+                lines += [f"# {key}.{inner} = {item!r}" for inner, item in value.items()]
+            else:
+                lines.append(
+                    f'# {key} = "{value}"' if isinstance(value, str) else f"# {key} = {value!r}"
+                )
+        lines.append(",".join(columns))
+        stamps = [repr(float(t)) for t in columns["time"]]
+        others = [[form(float(v)) for v in columns[k]] for k in columns if k != "time"]
+        lines += [",".join(row) for row in zip(stamps, *others, strict=True)]
+        path = tmp_path / f"{name}.csv"
+        path.write_text("\n".join(lines) + "\n")
+        return path
+
+    return write
+
+
+@pytest.fixture
+def trajectory_of() -> TrajectoryOf:
+    """The exact states of an orbit, rounded to float64, as a Trajectory in memory."""
+
+    def make(
+        orbit: Orbit,
+        times: Sequence[float],
+        *,
+        drop: Sequence[str] = (),
+        start: bool = True,
+        budget: Mapping[str, Any] | None = None,
+    ) -> Trajectory:
+        columns = _columns(orbit, times, drop)
+        metadata = _metadata(orbit, start)
+        if budget is not None:
+            metadata["budget"] = dict(budget)
+        velocity = None
+        if "vx" in columns:
+            velocity = np.column_stack([columns[k] for k in ("vx", "vy", "vz")])
+        return Trajectory(
+            path="run.csv",
+            name="run",
+            time=columns["time"],
+            position=np.column_stack([columns[k] for k in "xyz"]),
+            velocity=velocity,
+            proper_time=columns.get("proper_time"),
+            coordinate_time=columns.get("coordinate_time"),
+            affine=columns.get("affine"),
+            metadata=metadata,
+        )
+
+    return make
