@@ -6,10 +6,12 @@ import json
 import os
 import signal
 import sys
+import threading
 from typing import TYPE_CHECKING, Any, NoReturn
 
 import click
 
+from truefall.validate.cli_parts import Commands, Number, show_versions
 from truefall.validate.errors import InputError, UsageError
 from truefall.validate.terminal import prepare_streams, say, silence, working
 
@@ -25,65 +27,12 @@ _CHARTS = (
     "areal", "isotropic", "harmonic", "kerr-schild", "painleve-gullstrand",
     "eddington-finkelstein",
 )  # fmt: skip
-_LIBRARIES = (
-    "numpy", "scipy", "numba", "h5py", "python-flint", "matplotlib", "click", "rich", "pyarrow",
-)  # fmt: skip
 FAULT, INTERRUPTED = 70, 130
 
 
-class _Commands(click.Group):
-    """A group that names the nearest command when it does not know one."""
-
-    def resolve_command(
-        self, ctx: click.Context, args: list[str]
-    ) -> tuple[str | None, click.Command | None, list[str]]:
-        name = args[0]
-        if self.get_command(ctx, name) is None and not name.startswith("-"):
-            import difflib
-
-            near = difflib.get_close_matches(name, self.list_commands(ctx), n=1)
-            hint = f"; did you mean {near[0]!r}?" if near else ""
-            known = ", ".join(self.list_commands(ctx))
-            raise click.UsageError(f"no command {name!r}{hint} (commands: {known})")
-        return super().resolve_command(ctx, args)
-
-
-def _versions(ctx: click.Context, _param: click.Parameter, value: bool) -> None:
-    if not value or ctx.resilient_parsing:
-        return
-    import platform
-    from importlib.metadata import PackageNotFoundError, version
-
-    say(f"truefall {version('truefall')}")
-    say(f"python {platform.python_version()} on {platform.system()} {platform.machine()}")
-    for name in _LIBRARIES:
-        try:
-            inside = f" ({inner})" if (inner := _bundled(name)) else ""
-            say(f"{name} {version(name)}{inside}")
-        except PackageNotFoundError:
-            say(f"{name} not installed")
-    ctx.exit()
-
-
-def _bundled(name: str) -> str:
-    """The C library that a Python package brings along, as it names it itself."""
-    try:
-        if name == "h5py":
-            import h5py
-
-            return f"HDF5 {h5py.version.hdf5_version}"
-        if name == "python-flint":
-            import flint
-
-            return f"FLINT {flint.__FLINT_VERSION__}"
-    except (ImportError, AttributeError):
-        return "its library cannot be loaded"
-    return ""
-
-
-@click.group(cls=_Commands, context_settings={"help_option_names": ["-h", "--help"]})
+@click.group(cls=Commands, context_settings={"help_option_names": ["-h", "--help"]})
 @click.option(
-    "--version", is_flag=True, is_eager=True, expose_value=False, callback=_versions,
+    "--version", is_flag=True, is_eager=True, expose_value=False, callback=show_versions,
     help="Print the versions that matter and exit.",
 )  # fmt: skip
 def cli() -> None:
@@ -106,40 +55,16 @@ def _overrides(options: dict[str, Any]) -> dict[str, Any]:
     return found
 
 
-class _Number(click.ParamType):
-    """A finite number, positive where that is demanded."""
-
-    name = "number"
-
-    def __init__(self, *, positive: bool = False) -> None:
-        self.positive = positive
-
-    def convert(
-        self, value: Any, param: click.Parameter | None, ctx: click.Context | None
-    ) -> float:
-        """The float64, or a usage error."""
-        import math
-
-        try:
-            result = float(value)
-        except ValueError:
-            result = math.nan
-        if not math.isfinite(result) or (self.positive and result <= 0):
-            kind = "a positive finite number" if self.positive else "a finite number"
-            self.fail(f"{value!r} is not {kind}", param, ctx)
-        return result
-
-
 def _declarations(command: Callable[..., int]) -> Callable[..., int]:
     """Options that say what a file does not say about itself."""
     for option in (
-        click.option("--start-time", type=_Number(), help="Reading of the clock at the start."),
+        click.option("--start-time", type=Number(), help="Reading of the clock at the start."),
         click.option(
             "--clock", type=click.Choice(("coordinate", "proper")), help="What time means."
         ),
         click.option("--chart", type=click.Choice(_CHARTS), help="Coordinates of the file."),
         click.option("--particle", type=click.Choice(("massive", "light")), help="What moves."),
-        click.option("--gm", type=_Number(positive=True), help="GM in the system's units."),
+        click.option("--gm", type=Number(positive=True), help="GM in the system's units."),
         click.option("--system", type=click.Choice(_SYSTEMS), help="Unit system of the file."),
     ):
         command = option(command)
@@ -365,7 +290,8 @@ def _terminated(_number: int, _frame: object) -> NoReturn:
 def main(args: list[str] | None = None) -> None:
     """Run the command line and exit with the documented status."""
     prepare_streams()
-    signal.signal(signal.SIGTERM, _terminated)
+    if threading.current_thread() is threading.main_thread():
+        signal.signal(signal.SIGTERM, _terminated)
     try:
         status = cli.main(args=args, prog_name="truefall", standalone_mode=False)
     except click.exceptions.Exit as error:

@@ -70,9 +70,10 @@ def make(
             raise ArithmeticError("an orbit without an end refused a time")
         note = f"the orbit ends at {end.reason} at time {end.time!r}"
         if not truncate or not inside.any():
+            remedy = "" if truncate else ", or use --truncate to write the rows up to the end"
             raise InputError(
-                f"{note}, and sample {row + 1} asks for time {float(times[row])!r}; ask for "
-                "earlier times, or use --truncate to write the rows up to the end",
+                f"{note}, and sample {row + 1} asks for time {float(times[row])!r}; ask for times "
+                f"on the orbit's side of the end{remedy}",
                 spec.path,
             )
         extra = {"ends_at": end.time, "end_reason": end.reason}

@@ -1,0 +1,91 @@
+"""Parts of the command line: a group that knows near misses, numbers, versions."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import click
+
+from truefall.validate.terminal import say
+
+__all__ = ["Commands", "Number", "show_versions"]
+
+_LIBRARIES = (
+    "numpy", "scipy", "numba", "h5py", "python-flint", "matplotlib", "click", "rich", "pyarrow",
+)  # fmt: skip
+
+
+class Commands(click.Group):
+    """A group that names the nearest command when it does not know one."""
+
+    def resolve_command(
+        self, ctx: click.Context, args: list[str]
+    ) -> tuple[str | None, click.Command | None, list[str]]:
+        """The command, or a usage error that names the nearest one."""
+        name = args[0]
+        if self.get_command(ctx, name) is None and not name.startswith("-"):
+            import difflib
+
+            near = difflib.get_close_matches(name, self.list_commands(ctx), n=1)
+            hint = f"; did you mean {near[0]!r}?" if near else ""
+            known = ", ".join(self.list_commands(ctx))
+            raise click.UsageError(f"no command {name!r}{hint} (commands: {known})")
+        return super().resolve_command(ctx, args)
+
+
+class Number(click.ParamType):
+    """A finite number, positive where that is demanded."""
+
+    name = "number"
+
+    def __init__(self, *, positive: bool = False) -> None:
+        self.positive = positive
+
+    def convert(
+        self, value: Any, param: click.Parameter | None, ctx: click.Context | None
+    ) -> float:
+        """The float64, or a usage error."""
+        import math
+
+        try:
+            result = float(value)
+        except ValueError:
+            result = math.nan
+        if not math.isfinite(result) or (self.positive and result <= 0):
+            kind = "a positive finite number" if self.positive else "a finite number"
+            self.fail(f"{value!r} is not {kind}", param, ctx)
+        return result
+
+
+def show_versions(ctx: click.Context, _param: click.Parameter, value: bool) -> None:
+    """Callback of ``--version``."""
+    if not value or ctx.resilient_parsing:
+        return
+    import platform
+    from importlib.metadata import PackageNotFoundError, version
+
+    say(f"truefall {version('truefall')}")
+    say(f"python {platform.python_version()} on {platform.system()} {platform.machine()}")
+    for name in _LIBRARIES:
+        try:
+            inside = f" ({inner})" if (inner := _bundled(name)) else ""
+            say(f"{name} {version(name)}{inside}")
+        except PackageNotFoundError:
+            say(f"{name} not installed")
+    ctx.exit()
+
+
+def _bundled(name: str) -> str:
+    """The C library that a Python package brings along, as it names it itself."""
+    try:
+        if name == "h5py":
+            import h5py
+
+            return f"HDF5 {h5py.version.hdf5_version}"
+        if name == "python-flint":
+            import flint
+
+            return f"FLINT {flint.__FLINT_VERSION__}"
+    except (ImportError, AttributeError):
+        return "its library cannot be loaded"
+    return ""
