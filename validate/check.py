@@ -277,7 +277,7 @@ def _verdict(
     if past:
         return ("fail" if "fail" in (beyond, verdict) else "undecided"), past
     alone = len(trajectory) == 1 and trajectory.time[0] == spec.start_time
-    if alone and (start_from == "first row" or verdict == "pass"):
+    if alone and (start_from == "first row" or verdict != "fail"):
         return "not-judged", "the only row is the start itself"
     if verdict == "not-judged":
         return verdict, "no budget was given; errors are reported all the same"

@@ -145,9 +145,7 @@ def _one(
                 "parameter; drop that budget, angular_momentum (L/E) says what energy would",
                 where,
             )
-        needed = (
-            "a second clock (proper_time; affine for light; coordinate_time on the proper clock)"
-        )
+        needed = "second clock (proper_time; affine for light; coordinate_time on the proper clock)"
         if quantity != "clock":
             needed = "velocities (vx, vy, vz)"
         raise InputError(

@@ -178,12 +178,13 @@ def _start_lines(result: CheckResult) -> list[str]:
 def _rule_lines(result: CheckResult) -> list[str]:
     if not result.judgements:
         return []
-    lines = textwrap.wrap(f"rule: {RULE}", WIDTH, initial_indent="  ", subsequent_indent="        ")
+    rule = f"rule: {RULE}; w is the reference's bound b, the share q of the digits, and rounding"
+    lines = textwrap.wrap(rule, WIDTH, initial_indent="  ", subsequent_indent="        ")
     for j in result.judgements:
         lines.append(f"  {j.quantity}: {j.outcome.upper()} at row {j.row + 1}, time {j.time:.9g}")
         lines.append(
             f"      T = {j.tolerance:.3g}  d = {j.deviation:.3g}  w = {_upwards(j.guard)}"
-            f"  (reference bound {_upwards(j.bound)}, digits {_upwards(j.quantisation)})"
+            f"  b = {_upwards(j.bound)}  q = {_upwards(j.quantisation)}"
         )
         if j.adequacy is not None and j.adequacy < ADEQUATE:
             lines.append(
