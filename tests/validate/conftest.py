@@ -2,7 +2,11 @@
 
 from __future__ import annotations
 
+import os
+import subprocess
+import sys
 from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
@@ -112,3 +116,55 @@ def trajectory_of() -> TrajectoryOf:
         )
 
     return make
+
+
+@dataclass(frozen=True)
+class Outcome:
+    """What a run of the command line said, and its exit status."""
+
+    status: int
+    out: str
+    err: str
+
+    @property
+    def text(self) -> str:
+        return self.out + self.err
+
+
+@pytest.fixture
+def run(capsys: pytest.CaptureFixture[str]) -> Callable[..., Outcome]:
+    """The command line in this process; an outcome never holds a traceback."""
+
+    def call(*args: str | Path) -> Outcome:
+        from truefall.validate.cli import main
+
+        capsys.readouterr()
+        with pytest.raises(SystemExit) as stop:
+            main([str(a) for a in args])
+        captured = capsys.readouterr()
+        assert isinstance(stop.value.code, int)
+        outcome = Outcome(stop.value.code, captured.out, captured.err)
+        assert "Traceback" not in outcome.text, outcome.text
+        return outcome
+
+    return call
+
+
+@pytest.fixture
+def child() -> Callable[..., Outcome]:
+    """The command line in a process of its own."""
+
+    def call(*args: str | Path, folder: Path | None = None, **environment: str) -> Outcome:
+        program = [sys.executable, "-c", "from truefall.validate.cli import main; main()"]
+        done = subprocess.run(
+            [*program, *map(str, args)],
+            cwd=folder,
+            env={**os.environ, **environment},
+            capture_output=True,
+            text=True,
+            timeout=120,
+            check=False,
+        )
+        return Outcome(done.returncode, done.stdout, done.stderr)
+
+    return call
