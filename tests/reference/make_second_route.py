@@ -181,9 +181,7 @@ def end(orbit: dict[str, Any]) -> dict[str, str] | None:
     massive = orbit["particle"] == "massive"
     target = 0 if ingoing else 2
     mp.dps = 36
-    found = quadrature.time_to(
-        energy, momentum, radius, outward, target, orbit["chart"], massive
-    )
+    found = quadrature.time_to(energy, momentum, radius, outward, target, orbit["chart"], massive)
     clock = "parameter" if orbit["clock"] == "proper" else "chart_time"
     return {"time": mpmath.nstr(found[clock], 30)}
 

@@ -142,16 +142,15 @@ class Geodesic:
         radial = dot(n, v)
         lowered = [g_tn * n[i] + alpha * v[i] + beta * radial * n[i] for i in range(3)]
         lowered_t = g_tt + g_tn * radial
-        if self.massive:
-            rate = 1 / a.sqrt(-(lowered_t + dot(lowered, v)))
-        else:
-            rate = -1 / lowered_t
+        rate = 1 / a.sqrt(-(lowered_t + dot(lowered, v))) if self.massive else -1 / lowered_t
         return [rate * w for w in lowered], rate * lowered_t, v
 
     def invariants(self) -> tuple[Any, list[Any]]:
         """``E`` and the angular momentum vector at the start (geometric units)."""
         x, p = self.start.x, self.start.p
-        cross = [x[(i + 1) % 3] * p[(i + 2) % 3] - x[(i + 2) % 3] * p[(i + 1) % 3] for i in range(3)]
+        cross = [
+            x[(i + 1) % 3] * p[(i + 2) % 3] - x[(i + 2) % 3] * p[(i + 1) % 3] for i in range(3)
+        ]
         return -self.p_t, cross
 
     def expand(self, phase: Phase) -> tuple[list[Any], list[Any], Any]:

@@ -112,10 +112,19 @@ def _degenerate() -> list[dict[str, Any]]:
     light = {"particle": "light"}
     for chart in same_radius:
         orbits += [
-            _exact(f"circular-stable/{chart}", chart, [16.0, 0, 0], [0, 0.25, 0], [10.0, 1e3, -7.0]),
-            _exact(f"circular-unstable/{chart}", chart, [4.0, 0, 0], [0, 0, 0.5], [3.0, 40.0, -25.0]),
             _exact(
-                f"light-circular/{chart}", chart, [0, 3.0, 0], [1.0, 0, 0], [2.0, 30.0, -9.0], **light
+                f"circular-stable/{chart}", chart, [16.0, 0, 0], [0, 0.25, 0], [10.0, 1e3, -7.0]
+            ),
+            _exact(
+                f"circular-unstable/{chart}", chart, [4.0, 0, 0], [0, 0, 0.5], [3.0, 40.0, -25.0]
+            ),
+            _exact(
+                f"light-circular/{chart}",
+                chart,
+                [0, 3.0, 0],
+                [1.0, 0, 0],
+                [2.0, 30.0, -9.0],
+                **light,
             ),
             _exact(
                 f"light-critical/{chart}",
@@ -131,7 +140,9 @@ def _degenerate() -> list[dict[str, Any]]:
         _exact(f"circular-stable/{h}", h, [15.0, 0, 0], [0, 15 / 64, 0], [10.0, 1e3, -7.0]),
         _exact(f"circular-unstable/{h}", h, [0, 3.0, 0], [0.375, 0, 0], [3.0, 40.0, -25.0]),
         _exact(f"light-circular/{h}", h, [2.0, 0, 0], [0, 0, 1.0], [2.0, 30.0, -9.0], **light),
-        _exact(f"light-critical/{h}", h, [17.0, 0, 0], [-60.0, 17.0, 0], [9.0, 60.0, -40.0], **light),
+        _exact(
+            f"light-critical/{h}", h, [17.0, 0, 0], [-60.0, 17.0, 0], [9.0, 60.0, -40.0], **light
+        ),
         _exact("whirl-in/areal", "areal", [8.0, 0, 0], [-3 / 16, 3 / 8, 0], [9.0, 90.0, -50.0]),
         _exact("whirl-out/areal", "areal", [8.0, 0, 0], [3 / 16, 3 / 8, 0], [9.0, 300.0, -70.0]),
         _exact("whirl-in/harmonic", h, [7.0, 0, 0], [-3 / 16, 21 / 64, 0], [9.0, 90.0, -50.0]),
@@ -143,9 +154,15 @@ def _degenerate() -> list[dict[str, Any]]:
         # E = 1 exactly: (rdot + 2/r)^2 + vt^2 = 2/r in this chart.
         _exact(f"parabolic-in/{ef}", ef, [64.0, 0, 0], [-5 / 32, 1 / 8, 0], [90.0, 1e3, -300.0]),
         _exact(f"parabolic-out/{ef}", ef, [16.0, 0, 0], [1 / 8, 1 / 4, 0], [50.0, 1e3, -300.0]),
-        _exact(f"parabolic-capture/{ef}", ef, [16.0, 0, 0], [-3 / 8, 1 / 4, 0], [9.0, 21.0, -300.0]),
-        _exact("parabolic-radial-in/areal", "areal", [8.0, 0, 0], [-3 / 8, 0, 0], [9.0, 25.0, -90.0]),
-        _exact("parabolic-radial-out/areal", "areal", [8.0, 0, 0], [3 / 8, 0, 0], [9.0, 1e3, -12.0]),
+        _exact(
+            f"parabolic-capture/{ef}", ef, [16.0, 0, 0], [-3 / 8, 1 / 4, 0], [9.0, 21.0, -300.0]
+        ),
+        _exact(
+            "parabolic-radial-in/areal", "areal", [8.0, 0, 0], [-3 / 8, 0, 0], [9.0, 25.0, -90.0]
+        ),
+        _exact(
+            "parabolic-radial-out/areal", "areal", [8.0, 0, 0], [3 / 8, 0, 0], [9.0, 1e3, -12.0]
+        ),
     ]
     return orbits
 
@@ -168,8 +185,12 @@ def _beside() -> list[dict[str, Any]]:
         _exact(
             "innermost-up", "areal", [6.0, 0, 0], [0, nextafter(isco, 1.0), 0], [100.0, 2e3, -500.0]
         ),
-        _exact("beside-ring", "areal", [3.0, 0, 0], [2.0**-53, 1.0, 0], [50.0, 150.0, -100.0], **light),
-        _exact("beside-ring-in", "harmonic", [2.0, 0, 0], [-(2.0**-53), 1.0, 0], [50.0, 99.0], **light),
+        _exact(
+            "beside-ring", "areal", [3.0, 0, 0], [2.0**-53, 1.0, 0], [50.0, 150.0, -100.0], **light
+        ),
+        _exact(
+            "beside-ring-in", "harmonic", [2.0, 0, 0], [-(2.0**-53), 1.0, 0], [50.0, 99.0], **light
+        ),
         _exact(
             "beside-critical",
             "areal",
