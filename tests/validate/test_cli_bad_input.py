@@ -92,7 +92,7 @@ ORBITS: dict[str, tuple[str | bytes, str]] = {
     "no chart": (without('chart = "areal"\n', ORBIT), "chart missing"),
     "no unit": (without('system = "geometric"\n', ORBIT), "system missing"),
     "no clock": (without('clock = "coordinate"\n', ORBIT), "clock missing"),
-    "no start": (without("velocity = [0.0, 0.33, 0.0]\n", ORBIT), r"\[start\] lacks velocity"),
+    "no start": (without("velocity = [0.0, 0.33, 0.0]\n", ORBIT), r"start.*velocity"),
     "no samples": (without("[samples]\ntimes = [0.0, 1.0, 2.0]\n", ORBIT), r"\[samples\] missing"),
     "misspelt key": (swap("particle", "particel"), "did you mean 'particle'"),
     "misspelt table": (swap("[start]", "[strat]"), "did you mean 'start'"),
@@ -165,9 +165,7 @@ def test_check_refuses(run: Run, tmp_path: Path, what: str) -> None:
 
 
 @pytest.mark.parametrize("what", TRAJECTORIES)
-def test_convert_refuses_or_copies_and_leaves_no_half(
-    run: Run, tmp_path: Path, what: str
-) -> None:
+def test_convert_refuses_or_copies_and_leaves_no_half(run: Run, tmp_path: Path, what: str) -> None:
     path = write(tmp_path / "run.csv", TRAJECTORIES[what][0])
     done = run("convert", path, tmp_path / "copy.npz")
     # starts that are no orbit and files without velocities are trajectories all the same
@@ -211,9 +209,7 @@ def test_make_refuses_and_writes_nothing(run: Run, tmp_path: Path, what: str) ->
 
 
 @pytest.mark.parametrize("target", ["no/such/folder/out.csv", "folder.csv"])
-def test_make_refuses_a_place_where_it_cannot_write(
-    run: Run, tmp_path: Path, target: str
-) -> None:
+def test_make_refuses_a_place_where_it_cannot_write(run: Run, tmp_path: Path, target: str) -> None:
     (tmp_path / "folder.csv").mkdir()
     path = write(tmp_path / "probe.toml", ORBIT)
     done = run("make", path, "--out", tmp_path / target)
