@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Any, NoReturn
 
 import click
 
-from truefall.validate.cli_parts import Commands, Number, show_versions
+from truefall.validate.cli_parts import Commands, finite_number, show_versions
 from truefall.validate.errors import InputError, UsageError
 from truefall.validate.terminal import prepare_streams, say, silence, working
 
@@ -58,13 +58,20 @@ def _overrides(options: dict[str, Any]) -> dict[str, Any]:
 def _declarations(command: Callable[..., int]) -> Callable[..., int]:
     """Options that say what a file does not say about itself."""
     for option in (
-        click.option("--start-time", type=Number(), help="Reading of the clock at the start."),
+        click.option(
+            "--start-time",
+            metavar="NUMBER",
+            callback=finite_number,
+            help="Reading of the clock at the start.",
+        ),
         click.option(
             "--clock", type=click.Choice(("coordinate", "proper")), help="What time means."
         ),
         click.option("--chart", type=click.Choice(_CHARTS), help="Coordinates of the file."),
         click.option("--particle", type=click.Choice(("massive", "light")), help="What moves."),
-        click.option("--gm", type=Number(positive=True), help="GM in the system's units."),
+        click.option(
+            "--gm", metavar="NUMBER", callback=finite_number, help="GM in the system's units."
+        ),
         click.option("--system", type=click.Choice(_SYSTEMS), help="Unit system of the file."),
     ):
         command = option(command)
@@ -296,11 +303,11 @@ def main(args: list[str] | None = None) -> None:
         status = cli.main(args=args, prog_name="truefall", standalone_mode=False)
     except click.exceptions.Exit as error:
         status = error.exit_code
-    except click.exceptions.NoArgsIsHelpError as error:
-        error.show()
-        status = 2
     except click.ClickException as error:
-        say(f"truefall: {error.format_message()}; see {_help_of(error)}", err=True)
+        if isinstance(error, getattr(click.exceptions, "NoArgsIsHelpError", ())):
+            error.show()  # newer versions of click call the lone command an error
+        else:
+            say(f"truefall: {error.format_message()}; see {_help_of(error)}", err=True)
         status = 2
     except (UsageError, InputError) as error:
         say(f"truefall: {error}", err=True)

@@ -2,13 +2,11 @@
 
 from __future__ import annotations
 
-from typing import Any
-
 import click
 
 from truefall.validate.terminal import say
 
-__all__ = ["Commands", "Number", "show_versions"]
+__all__ = ["Commands", "finite_number", "show_versions"]
 
 _LIBRARIES = (
     "numpy", "scipy", "numba", "h5py", "python-flint", "matplotlib", "click", "rich", "pyarrow",
@@ -33,28 +31,21 @@ class Commands(click.Group):
         return super().resolve_command(ctx, args)
 
 
-class Number(click.ParamType):
-    """A finite number, positive where that is demanded."""
+def finite_number(ctx: click.Context, param: click.Parameter, value: str | None) -> float | None:
+    """Callback of an option that takes a number (for gm: a positive one)."""
+    import math
 
-    name = "number"
-
-    def __init__(self, *, positive: bool = False) -> None:
-        self.positive = positive
-
-    def convert(
-        self, value: Any, param: click.Parameter | None, ctx: click.Context | None
-    ) -> float:
-        """The float64, or a usage error."""
-        import math
-
-        try:
-            result = float(value)
-        except ValueError:
-            result = math.nan
-        if not math.isfinite(result) or (self.positive and result <= 0):
-            kind = "a positive finite number" if self.positive else "a finite number"
-            self.fail(f"{value!r} is not {kind}", param, ctx)
-        return result
+    if value is None:
+        return None
+    try:
+        result = float(value)
+    except ValueError:
+        result = math.nan
+    positive = param.name == "gm"
+    if not math.isfinite(result) or (positive and result <= 0):
+        kind = "a positive finite number" if positive else "a finite number"
+        raise click.BadParameter(f"{value!r} is not {kind}", ctx=ctx, param=param)
+    return result
 
 
 def show_versions(ctx: click.Context, _param: click.Parameter, value: bool) -> None:
