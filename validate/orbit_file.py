@@ -4,15 +4,15 @@ from __future__ import annotations
 
 import difflib
 import json
-import math
 import tomllib
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
-from fractions import Fraction
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from truefall.validate.errors import InputError
+from truefall.validate.metadata_values import number, refuse_unknown, table, vector
+from truefall.validate.sample_times import sample_times
 
 if TYPE_CHECKING:
     from truefall.reference import Orbit
@@ -20,7 +20,7 @@ if TYPE_CHECKING:
 __all__ = [
     "DECLARATIONS",
     "OrbitSpec",
-    "check_times",
+    "check_layer",
     "merge",
     "number",
     "parse_orbit",
@@ -47,7 +47,7 @@ _ELEMENTS = (
     "semilatus_rectum", "eccentricity", "inclination", "node", "periapsis", "anomaly",
 )  # fmt: skip
 _START = ("time", "position", "velocity", *_ELEMENTS)
-_SAMPLES = ("times", "first", "last", "count", "from_file")
+_LARGEST_FILE = 64 << 20
 
 
 @dataclass(frozen=True)
@@ -89,108 +89,59 @@ class OrbitSpec:
             raise InputError(f"{error.key}: {error}", self.path) from None
 
 
-def refuse_unknown(given: Mapping[str, Any], known: Sequence[str], what: str, where: str) -> None:
-    """InputError for the first unknown key, with the nearest known one."""
-    for key in given:
-        if key not in known:
-            near = difflib.get_close_matches(str(key), known, n=1)
-            hint = f"; did you mean {near[0]!r}?" if near else f"; known are {', '.join(known)}"
-            raise InputError(f"unknown key {key!r} in {what}{hint}", where)
+def check_layer(mapping: Mapping[str, Any], where: str | Path) -> None:
+    """Check the keys that one file gives, complete or not.
 
-
-def number(value: Any, key: str, where: str) -> float:
-    """A finite float64 from a TOML or JSON number."""
-    if isinstance(value, bool) or not isinstance(value, int | float):
-        raise InputError(f"{key} must be a number, not {value!r}", where)
-    try:
-        result = float(value)
-    except OverflowError:
-        result = math.inf
-    if not math.isfinite(result):
-        raise InputError(f"{key} must be a finite number, not {value!r}", where)
-    return result
-
-
-def _vector(value: Any, key: str, where: str) -> tuple[float, ...]:
-    if not isinstance(value, Sequence) or isinstance(value, str) or len(value) != 3:
-        raise InputError(f"{key} must be a list of three numbers, not {value!r}", where)
-    return tuple(number(v, f"{key}[{k}]", where) for k, v in enumerate(value))
-
-
-def _table(value: Any, key: str, where: str) -> Mapping[str, Any]:
-    if not isinstance(value, Mapping):
-        raise InputError(f"[{key}] must be a table, not {value!r}", where)
-    return value
-
-
-def check_times(times: Sequence[float], where: str, what: str = "samples.times") -> None:
-    """Refuse times that are neither strictly increasing nor strictly decreasing."""
-    if len(times) < 2:
-        return
-    rising = times[1] > times[0]
-    for k in range(1, len(times)):
-        if times[k] == times[k - 1]:
+    Raises
+    ------
+    InputError
+        For an unknown key or a value that is not allowed.
+    """
+    where = str(where)
+    refuse_unknown(mapping, _TOP, "the metadata", where)
+    for key, allowed in DECLARATIONS.items():
+        if key in mapping and allowed is not None and mapping[key] not in allowed:
+            near = difflib.get_close_matches(str(mapping[key]), allowed, n=1, cutoff=0.5)
+            hint = f"; did you mean {near[0]!r}?" if near else ""
             raise InputError(
-                f"{what}: row {k + 1} repeats the time {times[k]!r} of row {k}; times must be "
-                "strictly increasing or strictly decreasing",
-                where,
+                f"{key} is {mapping[key]!r}; allowed are {', '.join(allowed)}{hint}", where
             )
-        if (times[k] > times[k - 1]) != rising:
-            raise InputError(
-                f"{what}: row {k + 1} ({times[k]!r}) turns back after row {k} "
-                f"({times[k - 1]!r}); times must be strictly increasing or strictly decreasing",
-                where,
-            )
+    for key in ("start", "samples", "budget"):
+        table(mapping.get(key, {}), key, where)
+    start = mapping.get("start", {})
+    refuse_unknown(start, _START, "[start]", where)
+    for key in ("time", *_ELEMENTS):
+        if key in start:
+            number(start[key], f"start.{key}", where)
+    for key in ("position", "velocity"):
+        if key in start:
+            vector(start[key], f"start.{key}", where)
+    name = mapping.get("name", "orbit")
+    if not isinstance(name, str) or not name or not name.isprintable():
+        raise InputError(f"name must be a line of text, not {name!r}", where)
 
 
-def _sample_times(table: Mapping[str, Any], where: str) -> tuple[float, ...]:
-    refuse_unknown(table, _SAMPLES, "[samples]", where)
-    ways = [k for k in ("times", "from_file") if k in table]
-    if any(k in table for k in ("first", "last", "count")):
-        ways.append("first/last/count")
-    if len(ways) != 1:
-        raise InputError(
-            "[samples] must give exactly one of: times; first, last and count; from_file", where
-        )
-    if ways[0] == "times":
-        values = table["times"]
-        if not isinstance(values, Sequence) or isinstance(values, str) or not values:
-            raise InputError("samples.times must be a list of numbers", where)
-        times = tuple(number(t, f"samples.times[{k}]", where) for k, t in enumerate(values))
-    elif ways[0] == "from_file":
-        times = _times_file(table["from_file"], where)
-    else:
-        times = _regular_times(table, where)
-    check_times(times, where)
-    return times
-
-
-def _regular_times(table: Mapping[str, Any], where: str) -> tuple[float, ...]:
-    """Time i is the float64 nearest to first + i (last - first)/(count - 1), taken exactly."""
-    missing = [k for k in ("first", "last", "count") if k not in table]
+def _refuse_missing(mapping: Mapping[str, Any], where: str, need_start: bool) -> None:
+    """One sentence for all that is missing."""
+    missing = [key for key in DECLARATIONS if key not in mapping]
+    start = mapping.get("start", {})
+    lacking = [key for key in ("position", "velocity") if key not in start]
+    if any(key in start for key in _ELEMENTS) or not (need_start or len(lacking) == 1):
+        lacking = []
+    parts = []
     if missing:
-        raise InputError(f"[samples] lacks {', '.join(missing)}", where)
-    count = table["count"]
-    if isinstance(count, bool) or not isinstance(count, int) or not 2 <= count <= 100_000_000:
-        raise InputError(
-            f"samples.count must be a whole number from 2 to 100000000, not {count!r}", where
+        parts.append(
+            f"{', '.join(missing)} missing: truefall never guesses units, chart or clock; write "
+            "them into the orbit file (or the trajectory's header or sidecar), or give options "
+            + " ".join(f"--{key}" for key in missing)
         )
-    first = Fraction(number(table["first"], "samples.first", where))
-    step = (Fraction(number(table["last"], "samples.last", where)) - first) / (count - 1)
-    if step == 0:
-        raise InputError("samples.first and samples.last must differ", where)
-    base, over = first, step.denominator * first.denominator
-    a, b = base.numerator * step.denominator, step.numerator * base.denominator
-    return tuple((a + k * b) / over for k in range(count))
-
-
-def _times_file(name: Any, where: str) -> tuple[float, ...]:
-    from truefall.validate.formats.csv_format import read_times
-
-    if not isinstance(name, str):
-        raise InputError(f"samples.from_file must be a path, not {name!r}", where)
-    path = Path(where).parent / name
-    return tuple(float(t) for t in read_times(path))
+    if lacking:
+        parts.append(
+            f"[start] lacks {' and '.join(lacking)}: three Cartesian components in the chart "
+            "(or give elements: semilatus_rectum, eccentricity, ...)"
+        )
+    if parts:
+        raise InputError("; ".join(parts), where)
 
 
 def parse_orbit(
@@ -217,38 +168,20 @@ def parse_orbit(
         Naming the key, what is allowed and what to do.
     """
     where = str(where)
-    refuse_unknown(mapping, _TOP, "the orbit file", where)
-    missing = [k for k in DECLARATIONS if k not in mapping]
-    if missing:
-        raise InputError(
-            f"{', '.join(missing)} missing: truefall never guesses units, chart or clock; write "
-            "them into the orbit file (or the trajectory's header or sidecar), or give options "
-            + " ".join(f"--{k}" for k in missing),
-            where,
-        )
-    for key, allowed in DECLARATIONS.items():
-        if allowed is not None and mapping[key] not in allowed:
-            near = difflib.get_close_matches(str(mapping[key]), allowed, n=1, cutoff=0.5)
-            hint = f"; did you mean {near[0]!r}?" if near else ""
-            raise InputError(
-                f"{key} is {mapping[key]!r}; allowed are {', '.join(allowed)}{hint}", where
-            )
+    check_layer(mapping, where)
+    _refuse_missing(mapping, where, need_start)
     gm = number(mapping["gm"], "gm", where)
     _check_declarations(mapping, gm, where)
-    start = _table(mapping.get("start", {}), "start", where)
-    refuse_unknown(start, _START, "[start]", where)
-    position, velocity, elements = _parse_start(start, mapping["chart"], where, need_start)
+    start = mapping.get("start", {})
+    position, velocity, elements = _parse_start(start, mapping["chart"], where)
     samples = mapping.get("samples")
     if samples is None and need_samples:
         raise InputError(
             "[samples] missing: give times, or first, last and count, or from_file", where
         )
-    name = mapping.get("name", Path(where).stem)
-    if not isinstance(name, str) or not name or any(ord(c) < 32 for c in name):
-        raise InputError(f"name must be a line of text, not {name!r}", where)
-    times = None if samples is None else _sample_times(_table(samples, "samples", where), where)
+    times = None if samples is None else sample_times(table(samples, "samples", where), where)
     return OrbitSpec(
-        name=name,
+        name=mapping.get("name", Path(where).stem),
         system=mapping["system"],
         gm=gm,
         particle=mapping["particle"],
@@ -259,7 +192,7 @@ def parse_orbit(
         velocity=velocity,
         elements=elements,
         times=times,
-        budget=_table(mapping.get("budget", {}), "budget", where),
+        budget=mapping.get("budget", {}),
         path=where,
     )
 
@@ -278,7 +211,7 @@ def _check_declarations(mapping: Mapping[str, Any], gm: float, where: str) -> No
 
 
 def _parse_start(
-    start: Mapping[str, Any], chart: str, where: str, needed: bool
+    start: Mapping[str, Any], chart: str, where: str
 ) -> tuple[tuple[float, ...] | None, tuple[float, ...] | None, dict[str, float] | None]:
     given = [k for k in _ELEMENTS if k in start]
     if given:
@@ -290,38 +223,44 @@ def _parse_start(
         if missing:
             raise InputError(f"[start] lacks {', '.join(missing)}", where)
         return None, None, {k: number(start[k], f"start.{k}", where) for k in given}
-    missing = [k for k in ("position", "velocity") if k not in start]
-    if missing and (needed or len(missing) == 1):
-        raise InputError(
-            f"[start] lacks {' and '.join(missing)}: three Cartesian components in the chart "
-            "(or give elements: semilatus_rectum, eccentricity, ...)",
-            where,
-        )
-    if missing:
+    if "position" not in start:
         return None, None, None
     return (
-        _vector(start["position"], "start.position", where),
-        _vector(start["velocity"], "start.velocity", where),
+        vector(start["position"], "start.position", where),
+        vector(start["velocity"], "start.velocity", where),
         None,
     )
 
 
+def _no_repeats(pairs: list[tuple[str, Any]]) -> dict[str, Any]:
+    table = dict(pairs)
+    if len(table) < len(pairs):
+        keys = [key for key, _ in pairs]
+        again = next(key for k, key in enumerate(keys) if key in keys[:k])
+        raise ValueError(f"key {again!r} stands twice in one table")
+    return table
+
+
 def read_mapping(path: str | Path) -> dict[str, Any]:
     """The keys of a TOML or JSON file; InputError with line and column if it is neither."""
+    from truefall.validate.formats.files import check_readable
+
     path = Path(path)
+    check_readable(path)
+    is_json = path.suffix.lower() == ".json"
     try:
-        data = path.read_bytes()
+        if path.stat().st_size > _LARGEST_FILE:
+            raise InputError("is larger than 64 MB, too large for an orbit file", path)
+        text = path.read_bytes().decode("utf-8-sig")
+        mapping = (
+            json.loads(text, object_pairs_hook=_no_repeats) if is_json else tomllib.loads(text)
+        )
     except OSError as error:
         raise InputError(f"cannot be read ({error.strerror or error})", path) from None
-    if len(data) > 64 << 20:
-        raise InputError("is larger than 64 MB, too large for an orbit file", path)
-    try:
-        text = data.decode("utf-8-sig")
-        mapping = json.loads(text) if path.suffix == ".json" else tomllib.loads(text)
     except UnicodeDecodeError:
         raise InputError("is not UTF-8 text", path) from None
-    except (tomllib.TOMLDecodeError, json.JSONDecodeError) as error:
-        kind = "JSON" if path.suffix == ".json" else "TOML"
+    except (ValueError, RecursionError) as error:  # both parsers' errors are ValueErrors
+        kind = "JSON" if is_json else "TOML"
         raise InputError(f"is not valid {kind}: {error}", path) from None
     if not isinstance(mapping, dict):
         raise InputError("must hold a table of keys", path)
@@ -353,8 +292,11 @@ def merge(*layers: Mapping[str, Any]) -> dict[str, Any]:
 
 def _merge_start(old: Mapping[str, Any], new: Mapping[str, Any]) -> dict[str, Any]:
     kept = dict(old)
-    if any(k in new for k in _ELEMENTS):
+    if any(key in new for key in _ELEMENTS):
         kept = {k: v for k, v in kept.items() if k not in ("position", "velocity")}
     elif "position" in new or "velocity" in new:
         kept = {k: v for k, v in kept.items() if k not in _ELEMENTS}
+    whole = ("position" in new and "velocity" in new) or "semilatus_rectum" in new
+    if whole:  # a start of its own: where it names no time, it is at time 0
+        kept.pop("time", None)
     return {**kept, **new}

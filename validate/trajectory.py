@@ -9,7 +9,15 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-__all__ = ["COLUMNS", "VECTORS", "Quantisation", "StoredReference", "Trajectory"]
+__all__ = [
+    "CLOCKS",
+    "COLUMNS",
+    "SERIES",
+    "VECTORS",
+    "Quantisation",
+    "StoredReference",
+    "Trajectory",
+]
 
 Floats = npt.NDArray[np.float64]
 
@@ -17,7 +25,12 @@ Floats = npt.NDArray[np.float64]
 COLUMNS = (
     "time", "x", "y", "z", "vx", "vy", "vz", "proper_time", "coordinate_time", "affine",
 )  # fmt: skip
+#: Vectors and the columns of their components.
 VECTORS = {"position": ("x", "y", "z"), "velocity": ("vx", "vy", "vz")}
+#: Columns that count from the start: 0 there.
+CLOCKS = ("proper_time", "coordinate_time", "affine")
+#: Array names of NPZ and HDF5 files and of :class:`Trajectory`.
+SERIES = ("time", *VECTORS, *CLOCKS)
 
 
 @dataclass(frozen=True)
@@ -45,9 +58,18 @@ class Quantisation:
 
 @dataclass(frozen=True)
 class StoredReference:
-    """Second words and proven bounds of a result set; arrays by dataset name."""
+    """Second words and proven bounds of a result set.
+
+    Attributes
+    ----------
+    arrays : mapping
+        ``position_low``, ``position_bound``, ... by dataset name, each in the shape of its base.
+    invariants : mapping
+        Scalars (energy, ...) by name: value, second word or None, proven bound.
+    """
 
     arrays: Mapping[str, Floats]
+    invariants: Mapping[str, tuple[float, float | None, float]] = field(default_factory=dict)
 
 
 @dataclass(frozen=True)

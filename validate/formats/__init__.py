@@ -14,7 +14,15 @@ if TYPE_CHECKING:
     from truefall.validate.orbit_file import OrbitSpec
     from truefall.validate.trajectory import Trajectory
 
-__all__ = ["SUFFIXES", "read_trajectories", "suffix_of", "write_states", "write_trajectory"]
+__all__ = [
+    "SUFFIXES",
+    "losses",
+    "read_trajectories",
+    "read_trajectory",
+    "suffix_of",
+    "write_states",
+    "write_trajectory",
+]
 
 #: File name suffix to format.
 SUFFIXES = {
@@ -40,15 +48,14 @@ def suffix_of(path: str | Path) -> str:
 
 
 def _read_raw(path: Path) -> list[tuple[dict[str, Any], Trajectory]]:
-    kind = suffix_of(path)
-    if path.is_dir():
-        raise InputError("is a folder; name a file", path)
-    if not path.exists():
-        raise InputError("there is no such file", path)
-    if kind == "hdf5":
-        from truefall.validate.formats import hdf5_format
+    from truefall.validate.formats.files import check_readable
 
-        return hdf5_format.read_all(path)
+    kind = suffix_of(path)
+    check_readable(path)
+    if kind == "hdf5":
+        from truefall.validate.formats import hdf5_read
+
+        return hdf5_read.read_all(path)
     if kind == "csv":
         from truefall.validate.formats import csv_format
 
@@ -81,79 +88,121 @@ def read_trajectories(
     Raises
     ------
     InputError
-        If the file cannot be used or metadata are missing.
+        If the file cannot be used or metadata are missing; a wrong key or value names the file
+        that it stands in.
     """
-    from truefall.validate.orbit_file import merge, parse_orbit, read_mapping
+    from truefall.validate.orbit_file import check_layer, merge, parse_orbit
 
     path = Path(path)
-    raw = _read_raw(path)
-    sidecar = path.with_suffix(".toml")
-    layers_before = [dict(overrides or {})]
+    before = [dict(overrides or {})]
     if orbit_file is not None:
-        layers_before.append(_without_samples(read_mapping(orbit_file)))
-    layers_after = [_without_samples(read_mapping(sidecar))] if sidecar.is_file() else []
+        before.append(_layer(Path(orbit_file)))
+    sidecar = path.with_suffix(".toml")
+    raw = _read_raw(path)
+    after = [_layer(sidecar)] if sidecar.is_file() else []
     found = []
     for own, trajectory in raw:
-        merged = merge(*layers_before, own, *layers_after)
+        check_layer(own, path)
+        merged = merge(*before, own, *after)
         if need_metadata:
             parse_orbit(merged, path, need_start=False)
         found.append(replace(trajectory, metadata=merged))
     return found
 
 
-def _without_samples(mapping: Mapping[str, Any]) -> dict[str, Any]:
+def read_trajectory(
+    path: str | Path,
+    *,
+    trajectory: str | None = None,
+    overrides: Mapping[str, Any] | None = None,
+    orbit_file: str | Path | None = None,
+) -> Trajectory:
+    """The one trajectory of a file, or the one of the given name.
+
+    Raises
+    ------
+    InputError
+        Also if the file holds several and none is named, listing their names.
+    """
+    found = read_trajectories(path, overrides=overrides, orbit_file=orbit_file)
+    names = ", ".join(t.name for t in found)
+    if trajectory is not None:
+        found = [t for t in found if t.name == trajectory]
+        if not found:
+            raise InputError(f"holds {names}; none of them is called {trajectory!r}", path)
+    if len(found) > 1:
+        raise InputError(f"holds {len(found)} trajectories ({names}): name one of them", path)
+    return found[0]
+
+
+def _layer(path: Path) -> dict[str, Any]:
+    """An orbit file or sidecar as a layer of metadata: what it says of samples is its own."""
+    from truefall.validate.orbit_file import check_layer, read_mapping
+
+    mapping = read_mapping(path)
+    check_layer(mapping, path)
     return {k: v for k, v in mapping.items() if k not in ("samples", "case", "name")}
 
 
-def _columns(series: Mapping[str, Any]) -> dict[str, Any]:
-    from truefall.validate.trajectory import VECTORS
-
-    columns: dict[str, Any] = {}
-    for key, values in series.items():
-        if key.endswith(("_low", "_bound")):
-            continue
-        if key in VECTORS:
-            columns |= {name: values[:, k] for k, name in enumerate(VECTORS[key])}
-        else:
-            columns[key] = values
-    return columns
+def losses(path: str | Path, trajectory: Trajectory) -> list[str]:
+    """What writing a trajectory to ``path`` would leave out, a sentence each; empty if nothing."""
+    kind = suffix_of(path)
+    found = []
+    stored = trajectory.stored
+    if kind != "hdf5" and stored is not None and (stored.arrays or stored.invariants):
+        found.append("second words, proven bounds and invariants are kept in HDF5 only")
+    if kind == "oem":
+        kept = ("proper_time", "coordinate_time", "affine")
+        gone = [name for name in kept if getattr(trajectory, name) is not None]
+        if gone:
+            found.append(f"an OEM has no column for {', '.join(gone)}")
+        found.append("an OEM keeps 16 digits of positions and velocities")
+        found.append(
+            "an OEM names no gm, chart, clock, particle or start: keep them in a sidecar "
+            f"({Path(path).with_suffix('.toml').name}) or give them as options"
+        )
+        if len(trajectory) > 1 and trajectory.time[1] < trajectory.time[0]:
+            found.append("an OEM runs forwards in time: the rows are reversed")
+    return found
 
 
 def _write(
     path: Path,
     metadata: Mapping[str, Any],
     series: Mapping[str, Any],
-    invariants: Mapping[str, tuple[float, float, float]] | None,
-    certified: bool,
+    invariants: Mapping[str, tuple[float, float | None, float]],
     reproducible: bool,
 ) -> None:
-    from truefall.validate.formats.files import replace_file
-    from truefall.validate.formats.hdf5_format import _created
+    from truefall.validate.formats.assemble import columns_of
+    from truefall.validate.formats.files import creation_date, producer, replace_file
+    from truefall.validate.formats.metadata import flatten
 
     kind = suffix_of(path)
+    created = creation_date(reproducible)
     plain = {k: v for k, v in series.items() if not k.endswith(("_low", "_bound"))}
     if kind == "hdf5":
-        from truefall.validate.formats import hdf5_format
+        from truefall.validate.formats import hdf5_write
 
-        name = str(metadata.get("name", path.stem)).replace("/", "-").replace(".", "-")
-        attributes = _flat(metadata)
+        group, attributes = _group_name(metadata, path), flatten(metadata)
+        if group != metadata.get("name", group):
+            attributes["name"] = metadata["name"]
         replace_file(
             path,
-            lambda p: hdf5_format.write(
-                p, name, attributes, series, invariants=invariants, certified=certified,
-                reproducible=reproducible,
+            lambda p: hdf5_write.write(
+                p, group, attributes, series, invariants=invariants, created=created,
+                producer=producer(),
             ),
         )  # fmt: skip
         return
     if kind == "parquet":
         from truefall.validate.formats import parquet_format
 
-        replace_file(path, lambda p: parquet_format.write(p, metadata, _columns(plain)))
+        replace_file(path, lambda p: parquet_format.write(p, metadata, columns_of(plain)))
         return
     if kind == "csv":
         from truefall.validate.formats import csv_format
 
-        data = csv_format.write_rows(metadata, _columns(plain))
+        data = csv_format.write_rows(metadata, columns_of(plain))
     elif kind == "npz":
         from truefall.validate.formats import npz_format
 
@@ -162,9 +211,8 @@ def _write(
         from truefall.validate.formats import oem_format
 
         data = oem_format.text(
-            path, metadata, plain["position"], plain.get("velocity"), plain["time"],
-            _created(reproducible),
-        )  # fmt: skip
+            path, metadata, plain["position"], plain.get("velocity"), plain["time"], created
+        )
     replace_file(path, lambda p: _put(p, data))
 
 
@@ -172,12 +220,10 @@ def _put(path: Path, data: bytes) -> None:
     path.write_bytes(data)
 
 
-def _flat(metadata: Mapping[str, Any]) -> dict[str, Any]:
-    """Metadata as HDF5 attributes: start.position becomes start_position."""
-    flat = {k: v for k, v in metadata.items() if k not in ("start", "budget", "name", "producer")}
-    for key, value in dict(metadata.get("start", {})).items():
-        flat[f"start_{key}"] = value
-    return flat
+def _group_name(metadata: Mapping[str, Any], path: Path) -> str:
+    """The trajectory's name as HDF5 allows it: no slash, and neither "." nor ".."."""
+    name = str(metadata.get("name", path.stem)).replace("/", "-")
+    return name.replace(".", "-") if set(name) <= {"."} else name
 
 
 def write_states(
@@ -191,6 +237,15 @@ def write_states(
     reproducible: bool = False,
 ) -> None:
     """Write the reference trajectory of an orbit; format by suffix.
+
+    Parameters
+    ----------
+    extra : mapping
+        Further metadata: ``ends_at``, ``end_reason``.
+    certified : bool
+        Second words beside the bounds (HDF5).
+    reproducible : bool
+        A fixed date, so that repeated writing gives the same bytes.
 
     Raises
     ------
@@ -215,34 +270,39 @@ def write_states(
         series[key + "_bound"] = getattr(states, key + "_bound")
         if certified:
             series[key + "_low"] = getattr(states, key + "_low")
-    _write(Path(path), metadata, series, _invariants(orbit), certified, reproducible)
+    _write(Path(path), metadata, series, _invariants(orbit, certified), reproducible)
 
 
-def _invariants(orbit: Orbit) -> dict[str, tuple[float, float, float]]:
+def _invariants(orbit: Orbit, certified: bool) -> dict[str, tuple[float, float | None, float]]:
     names = (
         "energy", "energy_minus_one", "angular_momentum", "periapsis", "apoapsis",
         "radial_period", "proper_radial_period", "azimuth_per_radial_period",
     )  # fmt: skip
-    found = {}
+    found: dict[str, tuple[float, float | None, float]] = {}
     for name in names:
         value = getattr(orbit, name)
         if value is not None:
-            found[name] = (value.value, value.low, value.bound)
+            found[name] = (value.value, value.low if certified else None, value.bound)
     return found
 
 
 def write_trajectory(
     path: str | Path, trajectory: Trajectory, *, reproducible: bool = False
 ) -> None:
-    """Write a trajectory as read, second words and bounds included where the format has them."""
+    """Write a trajectory as read; :func:`losses` tells what a format cannot keep.
+
+    Raises
+    ------
+    InputError
+        If the file cannot be written; nothing is left behind.
+    """
     series: dict[str, Any] = {"time": trajectory.time}
     for key in ("position", "velocity", "proper_time", "coordinate_time", "affine"):
         values = getattr(trajectory, key)
         if values is not None:
             series[key] = values
-    certified = False
-    if trajectory.stored is not None:
-        series |= trajectory.stored.arrays
-        certified = any(k.endswith("_low") for k in trajectory.stored.arrays)
+    stored = trajectory.stored
+    if stored is not None:
+        series |= stored.arrays
     metadata = {"name": trajectory.name, **trajectory.metadata}
-    _write(Path(path), metadata, series, None, certified, reproducible)
+    _write(Path(path), metadata, series, {} if stored is None else stored.invariants, reproducible)

@@ -14,15 +14,17 @@ import numpy as np
 import numpy.typing as npt
 
 from truefall.validate.errors import InputError
-from truefall.validate.formats.assemble import check_columns, make_trajectory
-from truefall.validate.formats.text_digits import NUMBER, column_quantisation, file_is_shortest
-from truefall.validate.orbit_file import merge
-from truefall.validate.trajectory import VECTORS, Quantisation, Trajectory
+from truefall.validate.formats.assemble import arrays_of, check_columns, make_trajectory
+from truefall.validate.formats.metadata import dump_toml
+from truefall.validate.formats.text_digits import NUMBER, file_quanta
+from truefall.validate.trajectory import Trajectory
 
-__all__ = ["dump_toml", "read", "read_times", "write_rows"]
+__all__ = ["read", "read_times", "write_rows"]
 
 _LIMIT = 1 << 31
-_KEY_LINE = re.compile(r"#\s*[A-Za-z_][\w.-]*\s*=", re.ASCII)
+_KEY_LINE = re.compile(r"#\s*([A-Za-z_][\w-]*(?:\.[\w-]+)*)\s*=", re.ASCII)
+_FORTRAN = re.compile(r"[+-]?[0-9]*\.?[0-9]*[dDqQ][+-]?[0-9]+")
+_DECIMAL_COMMA = re.compile(r"[+-]?[0-9]+,[0-9]+(?:[eE][+-]?[0-9]+)?")
 
 Floats = npt.NDArray[np.float64]
 
@@ -42,29 +44,47 @@ def _read_text(path: Path) -> str:
         raise InputError("is not UTF-8 text; is it a CSV file?", path) from None
 
 
-def _metadata_line(line: str, number: int, path: Path) -> dict[str, Any]:
+def _metadata(lines: list[tuple[int, str]], path: Path) -> dict[str, Any]:
+    """The assignments among the leading comment lines, as one TOML document."""
+    assignments = [line.lstrip("#").strip() for _, line in lines]
     try:
-        return tomllib.loads(line.lstrip("#").strip())
-    except tomllib.TOMLDecodeError as error:
-        raise InputError(
-            f'line {number} is no TOML assignment ({error}); write for example # chart = "areal"',
-            path,
-        ) from None
+        return tomllib.loads("\n".join(assignments))
+    except (tomllib.TOMLDecodeError, RecursionError):
+        pass  # find the line at fault
+    for (number, _), assignment in zip(lines, assignments, strict=True):
+        try:
+            tomllib.loads(assignment)
+        except (tomllib.TOMLDecodeError, RecursionError) as error:
+            raise InputError(
+                f"line {number} is no TOML assignment ({error}); write for example "
+                '# chart = "areal"',
+                path,
+            ) from None
+    keys = [assignment.split("=")[0].strip() for assignment in assignments]
+    number, again = next(
+        ((n, k) for j, ((n, _), k) in enumerate(zip(lines, keys, strict=True)) if k in keys[:j]),
+        (lines[-1][0], keys[-1]),
+    )
+    raise InputError(f"line {number} gives {again} a second time", path)
 
 
 def _split(path: Path) -> tuple[dict[str, Any], list[str], list[list[str]], int]:
     """Metadata, header, rows of texts, and the line number of the first row."""
-    lines = _read_text(path).splitlines()
-    metadata: dict[str, Any] = {}
+    text = _read_text(path).replace("\r\n", "\n").replace("\r", "\n")
+    lines = text.split("\n")
+    assignments: list[tuple[int, str]] = []
     start = 0
     for start, line in enumerate(lines):
         if line.startswith("#"):
             if _KEY_LINE.match(line):
-                metadata = merge(_metadata_line(line, start + 1, path), metadata)
+                assignments.append((start + 1, line))
         elif line.strip():
             break
     else:
         raise InputError("has no header line; expected time,x,y,z,...", path)
+    if len(assignments) > 1000:
+        raise InputError("has more than 1000 lines of metadata", path)
+    metadata = _metadata(assignments, path)
     csv.field_size_limit(1 << 20)
     try:
         rows = list(csv.reader(io.StringIO("\n".join(lines[start:])), strict=True))
@@ -76,51 +96,55 @@ def _split(path: Path) -> tuple[dict[str, Any], list[str], list[list[str]], int]
 
 def _explain(text: str, column: str, line: int, path: Path) -> InputError:
     """The sentence for an entry that is no number."""
-    plain = text.strip()
-    place = f"line {line}, column {column!r}: {plain!r}"
-    if not plain:
-        return InputError(f"line {line}, column {column!r}: is empty, expected a number", path)
-    if plain.lower().lstrip("+-") in ("nan", "inf", "infinity"):
-        return InputError(f"{place} is not a finite number; every entry must be finite", path)
-    if re.fullmatch(r"[+-]?\d*\.?\d*[dD][+-]?\d+", plain):
-        return InputError(
-            f"{place} has a Fortran exponent; write e in place of {plain[re.search('[dD]', plain).start()]!r}",  # type: ignore[union-attr]  # noqa: E501
-            path,
-        )
-    if re.fullmatch(r"[+-]?\d+,\d+([eE][+-]?\d+)?", plain):
-        return InputError(f"{place} has a decimal comma; write a point", path)
-    return InputError(f"{place} is text where a number belongs", path)
+    where = f"line {line}, column {column!r}"
+    shown = repr(text if len(text) <= 60 else text[:57] + "...")
+    if not text:
+        return InputError(f"{where}: is empty, expected a number", path)
+    if text.lower().lstrip("+-") in ("nan", "inf", "infinity"):
+        return InputError(f"{where}: {shown} is not finite; every entry must be a number", path)
+    if _FORTRAN.fullmatch(text):
+        return InputError(f"{where}: {shown} has a Fortran exponent; write E instead of D", path)
+    if _DECIMAL_COMMA.fullmatch(text):
+        return InputError(f"{where}: {shown} has a decimal comma; write a point", path)
+    return InputError(f"{where}: {shown} is text where a number belongs", path)
+
+
+def _rows(
+    header: list[str], rows: list[list[str]], first: int, path: Path
+) -> tuple[list[list[str]], list[int]]:
+    """The rows that are not blank, and their line numbers."""
+    kept: list[list[str]] = []
+    lines: list[int] = []
+    for k, row in enumerate(rows):
+        if len(row) == len(header):
+            kept.append(row)
+            lines.append(first + k)
+        elif len(row) > 1 or (row and row[0].strip()):
+            hint = ""
+            if len(row) == 2 * len(header):
+                hint = "; if these are decimal commas, write points"
+            raise InputError(
+                f"line {first + k} has {len(row)} entries, the header has {len(header)}{hint}",
+                path,
+            )
+    if not kept:
+        raise InputError("has a header but no rows", path)
+    return kept, lines
 
 
 def _columns(
     header: list[str], rows: list[list[str]], first: int, path: Path
 ) -> tuple[dict[str, list[str]], dict[str, Floats]]:
-    kept: list[list[str]] = []
-    lines: list[int] = []
-    for k, row in enumerate(rows):
-        if not row or (len(row) == 1 and not row[0].strip()):
-            continue
-        if len(row) != len(header):
-            hint = ""
-            if len(row) == 2 * len(header):
-                hint = "; decimal commas? write points"
-            raise InputError(
-                f"line {first + k} has {len(row)} entries, the header has {len(header)}{hint}", path
-            )
-        kept.append(row)
-        lines.append(first + k)
-    if not kept:
-        raise InputError("holds a header but no rows", path)
+    kept, lines = _rows(header, rows, first, path)
     texts: dict[str, list[str]] = {}
     values: dict[str, Floats] = {}
     for k, name in enumerate(header):
         column = [row[k].strip() for row in kept]
-        for j, text in enumerate(column):
-            match = NUMBER.fullmatch(text)
-            if match is None or not (match[2] or match[3]):
-                raise _explain(text, name, lines[j], path)
+        if not all(map(NUMBER.fullmatch, column)):
+            j = next(j for j, text in enumerate(column) if not NUMBER.fullmatch(text))
+            raise _explain(column[j], name, lines[j], path)
         texts[name] = column
-        values[name] = np.array([float(t) for t in column])
+        values[name] = np.array(list(map(float, column)))
         if not np.isfinite(values[name]).all():
             j = int(np.argmin(np.isfinite(values[name])))
             raise InputError(
@@ -141,32 +165,9 @@ def read(path: str | Path) -> tuple[dict[str, Any], Trajectory]:
     metadata, header, rows, first = _split(path)
     check_columns(header, path)
     texts, values = _columns(header, rows, first, path)
-    shortest = file_is_shortest(texts, values)
-    quanta = {
-        name: column_quantisation(
-            texts[name], values[name], shortest_file=shortest, stamps=name == "time"
-        )
-        for name in header
-    }
-    arrays = {"time": values["time"]}
-    for vector, names in VECTORS.items():
-        if names[0] in values:
-            arrays[vector] = np.column_stack([values[n] for n in names])
-    for name in ("proper_time", "coordinate_time", "affine"):
-        if name in values:
-            arrays[name] = values[name]
-    quantisation = Quantisation(
-        time=float(quanta["time"].max()),
-        position=np.column_stack([quanta[n] for n in VECTORS["position"]]),
-        velocity=np.column_stack([quanta[n] for n in VECTORS["velocity"]])
-        if "vx" in quanta
-        else np.zeros(3),
-        clock=max(
-            (float(quanta[n].max()) for n in quanta if n in ("proper_time", "affine")), default=0.0
-        ),
-    )
+    quanta = file_quanta(texts, values)
     name = str(metadata.get("name", path.stem))
-    return metadata, make_trajectory(path, name, arrays, metadata, quantisation)
+    return metadata, make_trajectory(path, name, arrays_of(values), arrays_of(quanta), metadata)
 
 
 def read_times(path: str | Path) -> list[float]:
@@ -175,37 +176,15 @@ def read_times(path: str | Path) -> list[float]:
     _, header, rows, first = _split(path)
     if "time" not in header:
         raise InputError(f"has no column 'time'; its columns are {', '.join(header)}", path)
+    kept, lines = _rows(header, rows, first, path)
     k = header.index("time")
-    if any(len(row) <= k for row in rows if row):
-        raise InputError("has a row without an entry in column 'time'", path)
-    _, values = _columns(["time"], [[row[k]] for row in rows if row], first, path)
-    times: list[float] = values["time"].tolist()
+    times: list[float] = []
+    for row, line in zip(kept, lines, strict=True):
+        text = row[k].strip()
+        if not NUMBER.fullmatch(text):
+            raise _explain(text, "time", line, path)
+        times.append(float(text))
     return times
-
-
-def _toml_value(value: Any) -> str:
-    if isinstance(value, bool):
-        return "true" if value else "false"
-    if isinstance(value, int | float):
-        return repr(value)
-    if isinstance(value, str):
-        quoted = value.replace("\\", "\\\\").replace('"', '\\"')
-        return '"' + "".join(c if c.isprintable() else f"\\u{ord(c):04x}" for c in quoted) + '"'
-    if isinstance(value, Mapping):
-        inner = ", ".join(f"{k} = {_toml_value(v)}" for k, v in value.items())
-        return "{ " + inner + " }"
-    return "[" + ", ".join(_toml_value(v) for v in value) + "]"
-
-
-def dump_toml(metadata: Mapping[str, Any]) -> list[str]:
-    """Lines ``key = value``; tables become dotted keys."""
-    lines = []
-    for key, value in metadata.items():
-        if isinstance(value, Mapping):
-            lines += [f"{key}.{k} = {_toml_value(v)}" for k, v in value.items()]
-        else:
-            lines.append(f"{key} = {_toml_value(value)}")
-    return lines
 
 
 def write_rows(metadata: Mapping[str, Any], columns: Mapping[str, Floats]) -> bytes:

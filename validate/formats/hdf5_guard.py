@@ -1,14 +1,17 @@
 """Opening an HDF5 file that a stranger wrote: structure first, data afterwards.
 
 The HDF5 library is not meant to read hostile files, so only what a trajectory needs is let
-through: hard links, plain datasets of float32/float64 numbers stored in the file itself, the
-filters deflate, shuffle and fletcher32, chunks of moderate size, fixed-length strings.  Link by
-link, because indexing would follow an external link before anyone could look at it.
+through: hard links, plain datasets of IEEE float32 and float64 numbers stored in the file
+itself, the filters shuffle, deflate and fletcher32 in that order, chunks of moderate size whose
+compressed streams are found to hold no more than a chunk, and attributes that are numbers or
+strings.  Link by link, because indexing would follow an external link before anyone could look
+at it; dataset by dataset before its first element is read.
 """
 
 from __future__ import annotations
 
 import os
+import zlib
 from pathlib import Path
 from typing import Any
 
@@ -19,10 +22,14 @@ from truefall.validate.errors import InputError
 
 __all__ = ["GuardedFile"]
 
-_MAX_BYTES = 1 << 34
+_MAX_BYTES = 1 << 32
 _MAX_CHUNK = 64 << 20
-_FILTERS = {1: "deflate", 2: "shuffle", 3: "fletcher32"}
+_MAX_CHUNKS = 1_000_000
+_MAX_ATTRIBUTE = 65_536
 _MAX_OBJECTS = 10_000
+_DEFLATE, _SHUFFLE, _FLETCHER32 = 1, 2, 3
+_FILTERS = {_SHUFFLE: "shuffle", _DEFLATE: "deflate", _FLETCHER32: "fletcher32"}
+_CHECKSUM_BYTES = 4
 
 
 class GuardedFile:
@@ -41,12 +48,13 @@ class GuardedFile:
 
         self._h5py = h5py
         try:
-            if not self.path.is_file():
-                raise OSError("no such file")
             self._file = h5py.File(self.path, "r", locking="best-effort")
-        except (OSError, ValueError) as error:
-            text = str(error).split("(")[0].strip()
-            raise InputError(f"cannot be opened as HDF5 ({text or error})", path) from None
+        except (OSError, RuntimeError, ValueError) as error:
+            text = str(error).split("(")[-1].rstrip(")").strip()
+            raise InputError(
+                f"cannot be opened as HDF5 ({text or error}); is it a whole HDF5 file?", path
+            ) from None
+        self._names: dict[str, list[str]] = {}
 
     def __enter__(self) -> GuardedFile:
         return self
@@ -54,21 +62,31 @@ class GuardedFile:
     def __exit__(self, *_: object) -> None:
         self._file.close()
 
+    def _refuse(self, what: str) -> InputError:
+        return InputError(what, self.path)
+
     def children(self, group: Any) -> list[str]:
         """Names of a group's members, after checking that every link is a hard one."""
+        path = str(group.name)
+        if path in self._names:
+            return self._names[path]
+        if len(group) > _MAX_OBJECTS:
+            raise self._refuse(f"{path} holds more than {_MAX_OBJECTS} objects")
         names = []
-        for name in group:  # listing names follows no link
-            raw = name.encode()
-            if any(ord(c) < 32 for c in name):
-                raise InputError("an object's name holds control characters", self.path)
+        for raw in group.id:  # listing names follows no link
+            try:
+                name = raw.decode("utf-8")
+            except UnicodeDecodeError:
+                raise self._refuse(f"a name in {path} is not UTF-8") from None
+            if not name.isprintable():
+                raise self._refuse(f"the name {name!r} in {path} holds control characters")
             if group.id.links.get_info(raw).type != self._h5py.h5l.TYPE_HARD:
-                raise InputError(
-                    f"{group.name}/{name} is a soft or external link; copy the data into the file",
-                    self.path,
+                raise self._refuse(
+                    f"{path.rstrip('/')}/{name} is a soft or external link; copy the data into "
+                    "the file",
                 )
             names.append(name)
-            if len(names) > _MAX_OBJECTS:
-                raise InputError(f"{group.name} holds too many objects", self.path)
+        self._names[path] = names
         return names
 
     @property
@@ -76,91 +94,134 @@ class GuardedFile:
         """The root group."""
         return self._file["/"]
 
-    def group(self, parent: Any, name: str) -> Any | None:
-        """A member group, or None if there is none of that name."""
+    def _member(self, parent: Any, name: str) -> Any | None:
         if name not in self.children(parent):
             return None
-        child = parent[name]
+        try:
+            return parent[name]
+        except (KeyError, OSError, RuntimeError, TypeError, ValueError):
+            raise self._refuse(f"{parent.name.rstrip('/')}/{name} is damaged") from None
+
+    def group(self, parent: Any, name: str) -> Any | None:
+        """A member group, or None if there is none of that name."""
+        child = self._member(parent, name)
         return child if isinstance(child, self._h5py.Group) else None
 
     def numbers(self, parent: Any, name: str) -> npt.NDArray[Any] | None:
-        """A member dataset of float numbers as stored (float32 or float64), or None."""
-        if name not in self.children(parent):
+        """A member dataset of float numbers as stored (float32 or float64), or None.
+
+        Raises
+        ------
+        InputError
+            If it is anything else, or damaged, or not wholly written.
+        """
+        dataset = self._member(parent, name)
+        if dataset is None:
             return None
-        dataset = parent[name]
         if not isinstance(dataset, self._h5py.Dataset):
-            raise InputError(f"{parent.name}/{name} is not a dataset", self.path)
-        self._check_dataset(dataset)
+            raise self._refuse(f"{parent.name}/{name} is not a dataset")
         try:
-            values: npt.NDArray[Any] = dataset[()]
-        except (OSError, RuntimeError) as error:
-            raise InputError(
+            self._check_dataset(dataset)
+            values: npt.NDArray[Any] = np.asarray(dataset[()])
+        except (OSError, RuntimeError, ValueError, zlib.error) as error:
+            raise self._refuse(
                 f"{dataset.name} is damaged: its checksum or compression does not hold "
                 f"({str(error).splitlines()[0][:80]})",
-                self.path,
             ) from None
-        return np.asarray(values)
+        return values
 
     def _check_dataset(self, dataset: Any) -> None:
-        dtype, properties = dataset.dtype, dataset.id.get_create_plist()
-        if dtype.kind != "f" or dtype.itemsize not in (4, 8):
-            raise InputError(
-                f"{dataset.name} has type {dtype}; expected float64 (or float32) numbers", self.path
+        h5t, label = self._h5py.h5t, dataset.name
+        kind = dataset.id.get_type()
+        plain = (h5t.IEEE_F64LE, h5t.IEEE_F64BE, h5t.IEEE_F32LE, h5t.IEEE_F32BE)
+        if not any(kind.equal(t) for t in plain):
+            raise self._refuse(
+                f"{label} holds another type than float64 (or float32) numbers; write plain floats",
             )
+        space = dataset.id.get_space()
+        if (
+            space.get_simple_extent_type() == self._h5py.h5s.NULL
+            or space.get_simple_extent_ndims() > 2
+        ):
+            raise self._refuse(f"{label} has no shape of one or two axes")
+        properties = dataset.id.get_create_plist()
         if dataset.is_virtual or properties.get_external_count():
-            raise InputError(
-                f"{dataset.name} keeps its data outside this file; store them inside", self.path
-            )
-        if dataset.nbytes > _MAX_BYTES:
-            raise InputError(f"{dataset.name} claims more than 16 GB", self.path)
-        for k in range(properties.get_nfilters()):
-            code = properties.get_filter(k)[0]
+            raise self._refuse(f"{label} keeps its data outside this file; store them inside")
+        if space.get_simple_extent_npoints() * kind.get_size() > _MAX_BYTES:
+            raise self._refuse(f"{label} claims more than 4 GB")
+        filters = [properties.get_filter(k)[0] for k in range(properties.get_nfilters())]
+        for code in filters:
             if code not in _FILTERS:
-                raise InputError(
-                    f"{dataset.name} uses HDF5 filter {code}; allowed are "
-                    f"{', '.join(_FILTERS.values())}",
-                    self.path,
+                raise self._refuse(
+                    f"{label} uses HDF5 filter {code}; allowed are {', '.join(_FILTERS.values())}",
                 )
-        self._check_storage(dataset)
+        if filters != [code for code in _FILTERS if code in filters]:
+            raise self._refuse(
+                f"{label} uses filters out of order; the order is {', '.join(_FILTERS.values())}",
+            )
+        self._check_storage(dataset, filters)
 
-    def _check_storage(self, dataset: Any) -> None:
+    def _check_storage(self, dataset: Any, filters: list[int]) -> None:
+        label = dataset.name
         if dataset.chunks is None:
-            if dataset.size and dataset.id.get_storage_size() not in (0, dataset.nbytes):
-                raise InputError(f"{dataset.name} is not wholly stored", self.path)
-            if dataset.size and dataset.id.get_storage_size() == 0:
-                raise InputError(f"{dataset.name} was never written", self.path)
+            if dataset.id.get_storage_size() != dataset.nbytes:
+                raise self._refuse(f"{label} was never wholly written")
             return
         chunk = int(np.prod(dataset.chunks, dtype=object)) * dataset.dtype.itemsize
         if chunk > _MAX_CHUNK:
-            raise InputError(f"{dataset.name} has chunks of more than 64 MB", self.path)
+            raise self._refuse(f"{label} has chunks of more than 64 MB")
         wanted = 1
         for extent, part in zip(dataset.shape, dataset.chunks, strict=True):
             wanted *= -(-extent // part)
+        if wanted > _MAX_CHUNKS:
+            raise self._refuse(f"{label} has more than {_MAX_CHUNKS} chunks")
         if dataset.id.get_num_chunks() != wanted:
-            raise InputError(f"{dataset.name} was only partly written", self.path)
+            raise self._refuse(f"{label} was only partly written")
         for k in range(wanted):
-            if dataset.id.get_chunk_info(k).size > chunk + chunk // 64 + 256:
-                raise InputError(f"{dataset.name} has an oversized compressed chunk", self.path)
+            info = dataset.id.get_chunk_info(k)
+            if info.size > chunk + chunk // 64 + 256:
+                raise self._refuse(f"{label} has an oversized compressed chunk")
+            if _DEFLATE in filters and not info.filter_mask & (1 << filters.index(_DEFLATE)):
+                self._check_stream(dataset, info.chunk_offset, chunk)
+
+    def _check_stream(self, dataset: Any, offset: tuple[int, ...], chunk: int) -> None:
+        """Inflate a chunk within bounds: the library's own filter has none before HDF5 2.2."""
+        _, raw = dataset.id.read_direct_chunk(offset)
+        inflater = zlib.decompressobj()
+        size = len(inflater.decompress(raw, chunk + _CHECKSUM_BYTES + 1))
+        if size > chunk:
+            raise self._refuse(f"{dataset.name} has a chunk that inflates beyond its size")
+        if size < chunk or not inflater.eof:
+            raise self._refuse(f"{dataset.name} is damaged: a compressed chunk is cut short")
 
     def attributes(self, thing: Any, names: tuple[str, ...]) -> dict[str, Any]:
-        """The named attributes that exist: numbers, short arrays, strings."""
+        """The named attributes that exist: numbers, short arrays of numbers, strings."""
         found: dict[str, Any] = {}
-        h5 = self._h5py
         for name in names:
-            raw = name.encode()
-            if not h5.h5a.exists(thing.id, raw):
-                continue
-            attribute = h5.h5a.open(thing.id, raw)
-            if attribute.get_storage_size() > 65_536 or len(attribute.shape) > 1:
-                raise InputError(f"attribute {name!r} of {thing.name} is too large", self.path)
-            value = thing.attrs[name]
-            if isinstance(value, bytes):
-                value = value.split(b"\0")[0].decode("utf-8", "replace")
-            elif isinstance(value, np.ndarray):
-                value = value.tolist()
-            elif isinstance(value, np.generic):
-                value = value.item()
-                if isinstance(value, bytes):
-                    value = value.split(b"\0")[0].decode("utf-8", "replace")
-            found[name] = value
+            try:
+                if self._h5py.h5a.exists(thing.id, name.encode()):
+                    found[name] = self._attribute(thing, name)
+            except (OSError, RuntimeError, TypeError, ValueError):
+                raise self._refuse(f"attribute {name!r} of {thing.name} is damaged") from None
         return found
+
+    def _attribute(self, thing: Any, name: str) -> Any:
+        h5t = self._h5py.h5t
+        attribute = self._h5py.h5a.open(thing.id, name.encode())
+        kind = attribute.get_type()
+        text = kind.get_class() == h5t.STRING
+        if attribute.get_storage_size() > _MAX_ATTRIBUTE or len(attribute.shape) > 1:
+            raise self._refuse(f"attribute {name!r} of {thing.name} is too large")
+        if not text and kind.get_class() not in (h5t.FLOAT, h5t.INTEGER):
+            raise self._refuse(f"attribute {name!r} of {thing.name} is neither number nor text")
+        if text and attribute.shape not in ((), (1,)):
+            raise self._refuse(f"attribute {name!r} of {thing.name} is not one string")
+        if attribute.get_space().get_simple_extent_type() == self._h5py.h5s.NULL:
+            raise self._refuse(f"attribute {name!r} of {thing.name} is empty")
+        value: Any = np.asarray(thing.attrs[name])
+        if not text:
+            return value.tolist()
+        single: Any = value.reshape(())[()]
+        if isinstance(single, bytes):
+            return single.split(b"\0")[0].decode("utf-8", "replace")
+        return str(single)

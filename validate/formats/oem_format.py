@@ -2,10 +2,15 @@
 
 The standard has no value for a bare mass or for a chart, so an OEM carries a trajectory here
 only together with a sidecar or options that say gm, chart, clock and particle; nothing is
-inferred from its labels.  Agreement: kilometres and kilometres per second (the "astronomical"
-system); ``time`` is the number of seconds since 2000-01-01T00:00:00 of the message's own time
-scale, every day of 86400 s.  The standard allows 16 digits, which lose the last bit of some
-float64 numbers: the reader counts them as quantisation.
+inferred from its labels, and its comments are for people.  The agreement:
+
+- kilometres and kilometres per second: the "astronomical" system.  A trajectory in SI is
+  divided by 1000 on writing, rounded once, and comes back as "astronomical".
+- ``time`` is the number of seconds since 2000-01-01T00:00:00 of the message's own time scale,
+  every day of 86400 s; written with all decimals of the shortest form, so stamps come back
+  exactly.
+- The standard allows 16 digits, which do not hold every float64: numbers are written with 16,
+  correctly rounded, and a reader counts half a unit of the last as quantisation.
 """
 
 from __future__ import annotations
@@ -13,8 +18,7 @@ from __future__ import annotations
 import datetime
 import re
 from collections.abc import Mapping
-from decimal import Decimal
-from fractions import Fraction
+from decimal import Decimal, localcontext
 from pathlib import Path
 from typing import Any
 
@@ -22,21 +26,31 @@ import numpy as np
 import numpy.typing as npt
 
 from truefall.validate.errors import InputError
-from truefall.validate.formats.assemble import make_trajectory
-from truefall.validate.formats.text_digits import NUMBER
-from truefall.validate.trajectory import Quantisation, Trajectory
+from truefall.validate.formats.assemble import arrays_of, make_trajectory
+from truefall.validate.formats.text_digits import NUMBER, file_quanta
+from truefall.validate.trajectory import Trajectory
 
 __all__ = ["read", "text"]
 
+_LIMIT = 1 << 30
+_LINE = 254
 _ZERO = datetime.datetime(2000, 1, 1)
+_DAY = 86400
 _EPOCH = re.compile(
     r"(\d{4})-(?:(\d{2})-(\d{2})|(\d{3}))T(\d{2}):(\d{2}):(\d{2})(?:\.(\d+))?Z?", re.ASCII
 )
-_STAMP_DIGITS = 12
+_COLUMNS = ("time", "x", "y", "z", "vx", "vy", "vz")
+_MANDATORY = (
+    "OBJECT_NAME", "OBJECT_ID", "CENTER_NAME", "REF_FRAME", "TIME_SYSTEM", "START_TIME",
+    "STOP_TIME",
+)  # fmt: skip
+_AGREED = "PRIVATE AGREEMENT"
+
 Floats = npt.NDArray[np.float64]
 
 
-def _seconds(stamp: str, line: int, path: Path) -> tuple[Fraction, int]:
+def _seconds(stamp: str, line: int, path: Path) -> str:
+    """Seconds since 2000 as decimal text, with the decimals of the epoch."""
     match = _EPOCH.fullmatch(stamp)
     if match is None:
         raise InputError(
@@ -44,95 +58,130 @@ def _seconds(stamp: str, line: int, path: Path) -> tuple[Fraction, int]:
             "YYYY-DDDThh:mm:ss.d",
             path,
         )
+    hour, minute, second = int(match[5]), int(match[6]), int(match[7])
     try:
-        day = (
-            datetime.datetime(int(match[1]), 1, 1) + datetime.timedelta(int(match[4]) - 1)
-            if match[4]
-            else datetime.datetime(int(match[1]), int(match[2]), int(match[3]))
-        )
+        if match[4]:
+            day = datetime.datetime.strptime(f"{match[1]} {match[4]}", "%Y %j")
+        else:
+            day = datetime.datetime(int(match[1]), int(match[2]), int(match[3]))
+        datetime.time(hour, minute, second)
     except ValueError as error:
-        raise InputError(f"line {line}: {stamp!r} is no date: {error}", path) from None
-    whole = (day - _ZERO).days * 86400 + int(match[5]) * 3600 + int(match[6]) * 60 + int(match[7])
+        raise InputError(f"line {line}: {stamp!r} is no date ({error})", path) from None
+    whole = (day - _ZERO).days * _DAY + hour * 3600 + minute * 60 + second
     fraction = match[8] or ""
-    return whole + Fraction(int(fraction or 0), 10 ** len(fraction)), len(fraction)
+    if whole >= 0 or not int(fraction or 0):
+        return f"{whole}.{fraction}" if fraction else str(whole)
+    scaled = whole * 10 ** len(fraction) + int(fraction)  # before 2000: fractions count upwards
+    return str(Decimal(scaled).scaleb(-len(fraction)))
 
 
-def read(path: str | Path) -> tuple[dict[str, Any], Trajectory]:
-    """Metadata (only the unit system) and trajectory of an OEM with one segment."""
-    path = Path(path)
+def _lines(path: Path) -> list[str]:
     try:
-        lines = path.read_bytes().decode("ascii").splitlines()
+        if path.stat().st_size > _LIMIT:
+            raise InputError("is larger than 1 GB; use HDF5 for trajectories of that size", path)
+        data = path.read_bytes().decode("ascii")
     except OSError as error:
         raise InputError(f"cannot be read ({error.strerror or error})", path) from None
     except UnicodeDecodeError:
         raise InputError("is not ASCII text, as an OEM must be", path) from None
-    if not any(line.startswith("CCSDS_OEM_VERS") for line in lines[:3]):
+    return re.split(r"\r\n|\n\r|\n|\r", data)
+
+
+def _data_start(lines: list[str], path: Path) -> int:
+    """Index of the first line after the one metadata block, whose keywords are checked."""
+    stripped = [line.strip() for line in lines]
+    first = next((line for line in stripped if line), "")
+    if not first.startswith("CCSDS_OEM_VERS"):
         raise InputError("does not begin with CCSDS_OEM_VERS; is it an OEM in KVN form?", path)
-    if sum(line.strip() == "META_START" for line in lines) != 1:
+    if stripped.count("META_START") != 1 or stripped.count("META_STOP") != 1:
         raise InputError("must hold exactly one segment (META_START ... META_STOP)", path)
-    try:
-        start = [line.strip() for line in lines].index("META_STOP") + 1
-    except ValueError:
-        raise InputError("has no META_STOP", path) from None
-    rows, times, decimals, digits = [], [], 0, 0
-    for k, line in enumerate(lines[start:], start + 1):
-        if not line.strip() or line.startswith("COMMENT"):
-            continue
+    begin, end = stripped.index("META_START"), stripped.index("META_STOP")
+    keys = [line.split("=")[0].strip() for line in stripped[begin + 1 : end] if "=" in line]
+    keys = [key for key in keys if not key.startswith("COMMENT")]
+    missing = [key for key in _MANDATORY if key not in keys]
+    if missing:
+        raise InputError(f"its metadata block lacks {', '.join(missing)}", path)
+    for key in keys:
+        if keys.count(key) > 1:
+            raise InputError(f"its metadata block has {key} twice", path)
+    return end + 1
+
+
+def _row(line: str, number: int, path: Path) -> list[str]:
+    parts = line.split()
+    if len(parts) not in (7, 10):
+        raise InputError(
+            f"line {number} has {len(parts)} entries; expected an epoch and 6 numbers "
+            "(or 9, with accelerations)",
+            path,
+        )
+    for entry in parts[1:]:
+        if not NUMBER.fullmatch(entry):
+            raise InputError(f"line {number}: {entry[:60]!r} is no number", path)
+    return [_seconds(parts[0], number, path), *parts[1:7]]
+
+
+def read(path: str | Path) -> tuple[dict[str, Any], Trajectory]:
+    """Metadata (only the unit system) and trajectory of an OEM with one segment.
+
+    Raises
+    ------
+    InputError
+        Naming the line at fault.
+    """
+    path = Path(path)
+    lines = _lines(path)
+    rows = []
+    for number, line in enumerate(lines[(start := _data_start(lines, path)) :], start + 1):
         if line.strip() == "COVARIANCE_START":
             break
-        parts = line.split()
-        if len(parts) not in (7, 10):
-            raise InputError(
-                f"line {k} has {len(parts)} entries, expected epoch and 6 numbers", path
-            )
-        for text_ in parts[1:7]:
-            if not NUMBER.fullmatch(text_):
-                raise InputError(f"line {k}: {text_!r} is no number", path)
-            mantissa = text_.lower().split("e")[0]
-            digits = max(digits, len(re.sub(r"\D", "", mantissa).lstrip("0")))
-        seconds, places = _seconds(parts[0], k, path)
-        decimals = max(decimals, places)
-        times.append(seconds)
-        rows.append([float(v) for v in parts[1:7]])
+        if line.strip() and not line.startswith("COMMENT"):
+            rows.append(_row(line, number, path))
     if not rows:
         raise InputError("holds no ephemeris lines", path)
-    table = np.array(rows)
-    exact = all(Fraction(float(t)) == t for t in times)
-    with np.errstate(divide="ignore"):
-        power = np.floor(np.log10(np.abs(table)))
-    power[table == 0.0] = -300.0
-    quanta = 0.5 * 10.0 ** (power - (max(digits, 1) - 1))
-    arrays = {
-        "time": np.array([float(t) for t in times]),
-        "position": table[:, :3],
-        "velocity": table[:, 3:],
-    }
-    quantisation = Quantisation(
-        time=0.0 if exact else 0.5 * 10.0**-decimals,
-        position=quanta[:, :3],
-        velocity=quanta[:, 3:],
-    )
+    texts = {name: [row[k] for row in rows] for k, name in enumerate(_COLUMNS)}
+    values = {name: np.array(list(map(float, column))) for name, column in texts.items()}
     metadata = {"system": "astronomical"}
-    return metadata, make_trajectory(path, path.stem, arrays, metadata, quantisation)
+    return metadata, make_trajectory(
+        path, path.stem, arrays_of(values), arrays_of(file_quanta(texts, values)), metadata
+    )
 
 
 def _stamp(time: float, path: Path) -> str:
-    exact = Fraction(time)
-    units = round(exact * 10**_STAMP_DIGITS)
-    whole, rest = divmod(units, 10**_STAMP_DIGITS)
+    exact = Decimal(repr(time))
+    with localcontext() as context:
+        context.prec = 400
+        whole = int(exact // 1) - (exact < 0 and exact % 1 != 0)
+        fraction = exact - whole
     try:
         moment = _ZERO + datetime.timedelta(seconds=whole)
     except OverflowError:
         raise InputError(
             f"time {time!r} s lies outside the years 1 to 9999 of an OEM", path
         ) from None
-    fraction = f"{rest:0{_STAMP_DIGITS}d}".rstrip("0") or "0"
-    return f"{moment:%Y-%m-%dT%H:%M:%S}.{fraction}"
+    decimals = f"{fraction:f}".partition(".")[2].rstrip("0") or "0"
+    stamp = f"{moment.isoformat(timespec='seconds')}.{decimals}"
+    if len(stamp) > _LINE // 2:
+        raise InputError(
+            f"time {time!r} s has more decimals than a line of an OEM holds; use .h5 or .csv", path
+        )
+    return stamp
+
+
+def _number(value: float, scale: int) -> str:
+    with localcontext() as context:
+        context.prec = 800  # every float64 and its thousandth are exact decimals
+        return f"{Decimal(value) / scale:.15e}"
+
+
+def _object_name(metadata: Mapping[str, Any]) -> str:
+    name = re.sub(r"[^A-Z0-9 -]", " ", str(metadata.get("name", "")).upper())
+    return " ".join(name.split())[:80] or "UNKNOWN"
 
 
 def text(path: Path, metadata: Mapping[str, Any], position: Floats, velocity: Floats | None,
          time: Floats, created: str) -> bytes:  # fmt: skip
-    """The bytes of an OEM; positions and velocities in the metadata's system.
+    """The bytes of an OEM; positions (n, 3) and velocities (n, 3) in the metadata's system.
 
     Raises
     ------
@@ -143,27 +192,27 @@ def text(path: Path, metadata: Mapping[str, Any], position: Floats, velocity: Fl
         raise InputError("an OEM is in kilometres; a trajectory in geometric units has none", path)
     if velocity is None:
         raise InputError("an OEM needs velocities, and this trajectory has none", path)
-    scale = Decimal(1) if metadata["system"] == "astronomical" else Decimal(1000)
+    scale = 1 if metadata["system"] == "astronomical" else 1000
     stamps = [_stamp(t, path) for t in time.tolist()]
-    ends = (stamps[0], stamps[-1]) if time[-1] >= time[0] else (stamps[-1], stamps[0])
+    order = range(len(stamps)) if time[-1] >= time[0] else range(len(stamps) - 1, -1, -1)
     out = [
         "CCSDS_OEM_VERS = 3.0",
-        f"COMMENT chart {metadata['chart']}, clock {metadata['clock']}, gm {metadata['gm']!r} "
-        f"({metadata['system']})",
+        f"COMMENT chart {metadata['chart']}, clock {metadata['clock']}, particle "
+        f"{metadata['particle']}, gm {metadata['gm']!r} ({metadata['system']})",
+        "COMMENT epochs are seconds since 2000-01-01T00:00:00, every day of 86400 s",
         f"CREATION_DATE = {created.removesuffix('Z')}",
         "ORIGINATOR = TRUEFALL",
         "META_START",
-        "OBJECT_NAME = " + re.sub(r"[^A-Z0-9 -]", " ", str(metadata.get("name", "ORBIT")).upper()),
+        f"OBJECT_NAME = {_object_name(metadata)}",
         "OBJECT_ID = UNKNOWN",
-        "CENTER_NAME = PRIVATE AGREEMENT",
-        "REF_FRAME = PRIVATE AGREEMENT",
-        "TIME_SYSTEM = TDB",
-        f"START_TIME = {ends[0]}",
-        f"STOP_TIME = {ends[1]}",
+        f"CENTER_NAME = {_AGREED}",
+        f"REF_FRAME = {_AGREED}",
+        f"TIME_SYSTEM = {_AGREED}",
+        f"START_TIME = {stamps[order[0]]}",
+        f"STOP_TIME = {stamps[order[-1]]}",
         "META_STOP",
     ]
-    order = range(len(stamps)) if time[-1] >= time[0] else range(len(stamps) - 1, -1, -1)
     for k in order:
         numbers = [*position[k].tolist(), *velocity[k].tolist()]
-        out.append(" ".join([stamps[k], *(f"{Decimal(v) / scale:.15e}" for v in numbers)]))
+        out.append(" ".join([stamps[k], *(_number(v, scale) for v in numbers)]))
     return ("\n".join(out) + "\n").encode("ascii")
