@@ -222,21 +222,29 @@ def make(
 @click.argument("source", metavar="IN")
 @click.argument("target", metavar="OUT")
 @click.option("--orbit", "orbit_file", metavar="F.toml", help="Orbit file with the metadata.")
+@click.option("--trajectory", metavar="NAME", help="Which one, if IN holds several.")
 @click.option("--reproducible", is_flag=True, help="HDF5: byte-identical when repeated.")
 @_declarations
 def convert(
-    source: str, target: str, orbit_file: str | None, reproducible: bool, **options: Any
+    source: str,
+    target: str,
+    orbit_file: str | None,
+    trajectory: str | None,
+    reproducible: bool,
+    **options: Any,
 ) -> int:
     """Convert a trajectory between CSV, HDF5, NPZ, Parquet and OEM."""
     _writable(target)
-    from truefall.validate.formats import read_trajectories, write_trajectory
+    from truefall.validate.formats import losses, read_trajectory, write_trajectory
 
-    found = read_trajectories(source, overrides=_overrides(options), orbit_file=orbit_file)
-    if len(found) != 1:
-        names = ", ".join(t.name for t in found)
-        raise InputError(f"holds {len(found)} trajectories ({names}); convert takes one", source)
-    write_trajectory(target, found[0], reproducible=reproducible)
-    say(f"wrote {target}: {len(found[0])} rows", err=True)
+    with working(f"converting {source}"):
+        found = read_trajectory(
+            source, trajectory=trajectory, overrides=_overrides(options), orbit_file=orbit_file
+        )
+        write_trajectory(target, found, reproducible=reproducible)
+    say(f"wrote {target}: {len(found)} rows", err=True)
+    for sentence in losses(target, found):
+        say(f"note: {sentence}", err=True)
     return 0
 
 

@@ -168,3 +168,54 @@ def child() -> Callable[..., Outcome]:
         return Outcome(done.returncode, done.stdout, done.stderr)
 
     return call
+
+
+#: A bound orbit with a budget: the orbit file behind the fixtures below.
+ORBIT_FILE = """
+system = "geometric"
+gm = 1.0
+particle = "massive"
+chart = "areal"
+clock = "coordinate"
+[start]
+position = [10.0, 0.0, 0.0]
+velocity = [0.0, 0.33, 0.02]
+[samples]
+first = 0.0
+last = 200.0
+count = 41
+[budget]
+position = 1e-9
+"""
+
+
+@pytest.fixture
+def orbit_file(tmp_path: Path) -> Path:
+    path = tmp_path / "probe.toml"
+    path.write_text(ORBIT_FILE)
+    return path
+
+
+@pytest.fixture
+def exact(run: Callable[..., Outcome], orbit_file: Path) -> Path:
+    """A reference trajectory; the orbit file beside it is its sidecar."""
+    out = orbit_file.with_suffix(".csv")
+    assert run("make", orbit_file, "--out", out).status == 0
+    return out
+
+
+@pytest.fixture
+def spoil() -> Callable[..., Path]:
+    """A copy of a CSV with one number changed (rows counted after the header line)."""
+
+    def change(path: Path, row: int, column: int, error: float) -> Path:
+        lines = path.read_text().splitlines()
+        first = next(k for k, line in enumerate(lines) if line.startswith("time,")) + 1
+        cells = lines[first + row].split(",")
+        cells[column] = repr(float(cells[column]) + error)
+        lines[first + row] = ",".join(cells)
+        copy = path.with_name("spoiled.csv")
+        copy.write_text("\n".join(lines) + "\n")
+        return copy
+
+    return change

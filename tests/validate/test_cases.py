@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
+from pathlib import Path
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -158,3 +160,32 @@ def test_million_revolutions_start_again_at_the_periapsis() -> None:
     periapsis = 10.0 / 1.3
     assert abs(found.radius[2] - periapsis) < 1e-3
     assert found.winding[1] > 1e6
+
+
+# The catalogue through the whole program. -------------------------------------------------------
+
+
+@pytest.mark.parametrize("chosen", ALL)
+def test_what_make_writes_check_passes_and_twice_the_budget_fails(
+    chosen: Case, tmp_path: Path
+) -> None:
+    """Not a test of the truth (that is tests/reference), but of all that lies between."""
+    from truefall.validate.check import check_file
+    from truefall.validate.formats import read_trajectories, write_trajectory
+    from truefall.validate.make import make
+
+    suffix = ".h5" if len(chosen.name) % 2 else ".csv"
+    made = make(chosen.spec, tmp_path / f"exact{suffix}")
+    (result,) = check_file(made.path, budget=dict(chosen.spec.budget))
+    assert result.verdict == "pass", result.reason
+    assert result.orbit is not None
+    assert result.orbit.orbit_class == chosen.orbit_class
+    (found,) = read_trajectories(made.path)
+    budget = parse_budget(chosen.spec.budget, chosen.spec.system, chosen.name)
+    position = found.position.copy()
+    position[-1, 1] += 2 * budget.absolute["position"]
+    write_trajectory(tmp_path / "spoiled.npz", replace(found, position=position, stored=None))
+    (result,) = check_file(tmp_path / "spoiled.npz", budget=dict(chosen.spec.budget))
+    assert result.verdict == "fail"
+    (judgement,) = (j for j in result.judgements if j.quantity == "position")
+    assert judgement.failing_rows == 1
