@@ -182,7 +182,7 @@ def _tell(story: Story, folder: Path, count: str) -> tuple[Chapter, CheckResult]
     say(f"{word:<10}  {count}  {story.name}: {story.text}", colour=colour)
     tolerance = story.budget if story.system == "SI" else f"{story.budget} GM/c^2"
     say(f"{'':10}       {error}, budget {tolerance}")
-    links = tuple(f"{story.name}/{p.name}" for p in pictures)
+    links = tuple((f"{story.name}/{p.name}", p.read_bytes()) for p in pictures)
     return Chapter(story.name, word, story.text, links, render(result)), result
 
 

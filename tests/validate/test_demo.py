@@ -54,6 +54,8 @@ def test_demo_runs_and_leaves_a_whole_folder(run: Run, tmp_path: Path) -> None:
     for link in links.found:
         if link.startswith("#"):
             assert link[1:] in links.anchors
+        elif link.startswith("data:"):
+            assert link.startswith("data:image/png;base64,iVBOR")
         else:
             assert (folder / link).is_file(), link
     # it can be run again in its own folder, and by hand on its own files
