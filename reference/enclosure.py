@@ -7,6 +7,7 @@ from dataclasses import dataclass
 from fractions import Fraction
 from typing import TypeVar
 
+import numpy as np
 from flint import arb, fmpq
 
 from truefall.reference.declaration import rational
@@ -17,7 +18,7 @@ from truefall.reference.exact.rounding import Rounded, ball_to_float, round_ball
 from truefall.reference.exact.segment import NotCovered
 from truefall.reference.exact.solution import BeyondEnd, Instant, MoreBits, Solution
 from truefall.reference.exact.start import Motion
-from truefall.reference.states import Bounded
+from truefall.reference.states import Bounded, Floats
 
 __all__ = ["Enclosure", "Sample"]
 
@@ -145,6 +146,59 @@ class Enclosure:
             )
         return [found[k] for k in range(len(elapsed))]
 
+    def planar(self, clock: str, other: str, elapsed: list[fmpq]) -> Floats:
+        """Planar position, velocity and the other clock as two words, (n, 5, 2)."""
+        flat = Frame((arb(1), arb(0)), (arb(0), arb(1)))
+        scale = self._length if other == "tau" and not self.motion.mu else self._time
+        out = np.empty((len(elapsed), 5, 2))
+        for k, time in enumerate(elapsed):
+
+            def take(solution: Solution, time: fmpq = time) -> list[arb]:
+                instant = solution.at(clock, time)
+                x, v = chart_state(self.chart, instant, solution.flow.momentum, flat)
+                reading = instant.chart if other == "chart" else instant.tau
+                return [
+                    *(c * self._length for c in x), *(c * self._speed for c in v), reading * scale
+                ]  # fmt: skip
+
+            balls = self.first_that(take, lambda b: _fine(b[:2]) and _fine(b[2:4]))
+            for j, ball in enumerate(balls):
+                high = ball_to_float(ball)
+                with working(256):
+                    out[k, j] = high, ball_to_float(ball - arb(high))
+        return out
+
+    def reduction(self, clock: str, other: str) -> tuple[float, Floats, Floats] | None:
+        """First elapsed time of the period that holds the start, the period's words, the turn's."""
+
+        def take(solution: Solution) -> tuple[arb, ...] | None:
+            period = solution.period
+            if period is None:
+                return None
+            scale = self._length if other == "tau" and not self.motion.mu else self._time
+            turn = solution.flow.momentum * period.s
+            turn -= 2 * arb.pi() * (turn / (2 * arb.pi())).mid().floor().mid()
+            low = -period.before[clock] - solution.start[clock]
+            length = period.clocks[clock] * self._time
+            return low * self._time, length, period.clocks[other] * scale, turn
+
+        balls = self.first_that(take, lambda b: b is None or all(_fine([x]) for x in b[1:]))
+        if balls is None:
+            return None
+        words = []
+        for ball in balls[1:]:
+            high = ball_to_float(ball)
+            with working(256):
+                words += [high, ball_to_float(ball - arb(high))]
+        return ball_to_float(balls[0]), np.array(words[:4]), np.array(words[4:])
+
+    def plane(self) -> Floats:
+        """The frame's unit vectors rounded, (3, 2)."""
+        with working(256):
+            frame = self.frame.balls()
+            columns = [[ball_to_float(c) for c in axis] for axis in (frame.radial, frame.across)]
+        return np.array(columns).T.copy()
+
     def _sample(self, precision: int, clock: str, elapsed: fmpq, digits: int) -> Sample | None:
         try:
             instant = self.solution(precision).at(clock, elapsed)
@@ -188,6 +242,15 @@ class Enclosure:
                     return None
                 numbers.append(rounded)
         return numbers
+
+
+def _fine(balls: list[arb]) -> bool:
+    """Whether a vector is known to 33 digits of its size."""
+    size2 = sum((b * b for b in balls), arb(0))
+    if not size2 > 0:
+        return all(b.is_finite() and b.rad() < arb((1, -200)) for b in balls)
+    limit = arb((1, -110)) * size2.sqrt().lower()
+    return all(b.is_finite() and b.rad() <= limit for b in balls)
 
 
 def _turning(solution: Solution, upper: bool) -> arb | None:

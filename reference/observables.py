@@ -151,7 +151,7 @@ def light_travel_time(periapsis: float, r: float, gm: float = 1.0, c: float = 1.
 
     def rate(y: float) -> float:
         q = low + y * y
-        return 2.0 * q**2.5 / ((q - 2.0) * sqrt(q * q + q * low + low * low - square))
+        return 2.0 * q * q * sqrt(q) / ((q - 2.0) * sqrt(q * q + q * low + low * low - square))
 
     reach = sqrt(high - low)
     edges = [0.0]

@@ -324,18 +324,20 @@ class Leg:
             offset = to_ball(flow.motion.inverse_radius - circle)
             return self.place(index, piece.find_u(u0, offset))
         v0 = delta * flow.w0
-        # Near a turning point v pins the place down, elsewhere u does.
-        bend = abs(flow.slope(u0))
-        if (v0 * v0).mid() < (bend * u0).mid() / 64 and not bend.contains(0):
-            place = self.place(index, piece.find_v(v0))
-            if place.point.u.overlaps(u0):
-                return place
         side = 0
         if index == 0 and self.turning:
             side = 1
         elif self.end is LegEnd.TURN and self.closed:
             side = -1
-        place = self.place(index, piece.find_u(u0, side))
-        if not place.point.v.overlaps(v0):
-            raise NotCovered("the start was found on the wrong side of a turning point")
-        return place
+        # Near a turning point v pins the place down, elsewhere u does: take the tighter.
+        found: list[Place] = []
+        for find in (lambda: piece.find_u(u0, side), lambda: piece.find_v(v0)):
+            try:
+                place = self.place(index, find())
+            except NotCovered:
+                continue
+            if place.point.u.overlaps(u0) and place.point.v.overlaps(v0):
+                found.append(place)
+        if not found:
+            raise NotCovered("the start was not found on its leg")
+        return min(found, key=lambda place: place.y.rad())

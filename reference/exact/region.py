@@ -5,7 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 from enum import Enum
 
-from flint import arb, arb_poly, fmpq
+from flint import arb, fmpq
 
 from truefall.reference.exact.field import Exact, is_zero, sign, to_ball
 from truefall.reference.exact.flow import Flow
@@ -38,52 +38,67 @@ class Region:
     name: str
 
 
-def _refined(poly: arb_poly, slope: arb_poly, box: arb, precision: int) -> arb:
-    """Sharpen an isolating enclosure of a simple real root to the working precision."""
-    x = box.mid()
-    for _ in range(12 + precision.bit_length()):
-        step = (poly(x) / slope(x)).mid()
-        x = (x - step).mid()
-        if abs(step) <= abs(x) * arb((1, -precision)):
+def _outermost_root(flow: Flow) -> arb:
+    """The real root farthest from ``u = 1/6``, which is always well separated.
+
+    With ``u = 1/6 + t`` the potential is ``2 L^2 (t^3 + p t + q)``.  The roots sum to zero, so
+    the largest in size has the sign of ``-q`` and the others lie on the other side; Newton's
+    method comes down to it from ``sqrt|p| + cbrt|q|`` without overshooting.
+    """
+    m2 = flow.momentum2
+    p = flow.mu / m2 - arb(1) / 12
+    q = flow.excess / (2 * m2) + flow.mu / (6 * m2) - arb(1) / 108
+    sign_q = 1 if q > 0 else -1
+    bound = (abs(p).upper().sqrt() + abs(q).upper().root(3)).upper()
+    t = (-sign_q * bound).mid()
+    pm, qm = p.mid(), q.mid()
+    for _ in range(200):
+        step = ((t * t * t + pm * t + qm) / (3 * t * t + pm)).mid()
+        t = (t - step).mid()
+        if abs(step) <= abs(t) * arb((1, 2 - flow.precision)):
             break
-    spread = (4 * abs(poly(x) / slope(x)).upper() + abs(x) * arb((1, -precision))).upper()
-    ball = x + spread * arb(0, 1)
-    rate = slope(ball)
-    if not box.overlaps(x) or rate.contains(0):
-        raise MoreBits("a root of the radial cubic is not isolated")
-    image = x - poly(x) / rate
+    residual = t * t * t + p * t + q
+    slope = 3 * t * t + p
+    spread = (4 * abs(residual / slope).upper() + abs(t) * arb((1, -flow.precision))).upper()
+    ball = t + spread * arb(0, 1)
+    slope = 3 * ball * ball + p
+    if slope.contains(0):
+        raise MoreBits("the outermost root of the radial cubic is not isolated")
+    image = t - residual / slope
     if not ball.contains(image):
-        raise MoreBits("a root of the radial cubic is not enclosed")
-    return image
+        raise MoreBits("the outermost root of the radial cubic is not enclosed")
+    return arb(1) / 6 + image
 
 
 def _real_roots(flow: Flow) -> list[arb]:
-    """The simple real roots of the radial potential in ascending order."""
+    """The simple real roots of the radial potential in ascending order.
+
+    One root by Newton's method, the others from the quadratic that is left; how many are real
+    is decided exactly by the sign of the discriminant.
+    """
     m = flow.motion
-    poly = arb_poly([flow.excess, 2 * flow.mu, -flow.momentum2, 2 * flow.momentum2])
-    try:
-        boxes = poly.complex_roots()
-    except ValueError as error:
-        raise MoreBits(str(error)) from error
-    slope = poly.derivative()
-    real = [b.real for b in boxes if b.imag.contains(0)]
-    a, c, d = 2 * m.momentum_squared, 2 * m.mu, m.energy_squared - m.mu
-    b = -m.momentum_squared
+    a, b, c, d = 2 * m.momentum_squared, -m.momentum_squared, 2 * m.mu, m.energy_squared - m.mu
     discriminant = (
-        18 * a * b * c * d
-        - 4 * b * b * b * d
-        + b * b * c * c
-        - 4 * a * c * c * c
+        18 * a * b * c * d - 4 * b * b * b * d + b * b * c * c - 4 * a * c * c * c
         - 27 * a * a * d * d
-    )
-    if len(real) != (3 if sign(discriminant) > 0 else 1):
-        raise MoreBits("real and complex roots of the radial cubic are not told apart")
-    roots = []
-    for box in real:
-        if is_zero(d) and box.contains(0):
-            roots.append(arb(0))
-        else:
-            roots.append(_refined(poly, slope, box, flow.precision))
+    )  # fmt: skip
+    lead, middle, linear = 2 * flow.momentum2, -flow.momentum2, arb(2 * flow.mu)
+    if is_zero(d):  # parabolic, or light at infinity's edge: u = 0 is a root
+        first, rest1, rest0 = arb(0), middle, linear
+    else:
+        first = _outermost_root(flow)
+        rest1 = middle + lead * first
+        rest0 = linear + rest1 * first
+        if abs(first) > 0.1:  # the other way round nothing cancels in weak fields
+            rest0 = -flow.excess / first
+            rest1 = (rest0 - linear) / first
+    if sign(discriminant) < 0:
+        return [first]
+    inner = rest1 * rest1 - 4 * lead * rest0
+    if not inner > 0:
+        raise MoreBits("two turning points are not told apart")
+    half = -(rest1 + (inner.sqrt() if rest1 > 0 else -inner.sqrt())) / 2
+    roots = [first, half / lead, rest0 / half]
     return sorted(roots, key=lambda r: r.mid())
 
 

@@ -275,3 +275,22 @@ def test_times_may_come_in_any_order_and_run_backwards():
 
     assert np.array_equal(one.position, other.position[::-1])
     assert np.array_equal(one.position[0] * [1, -1, -1], one.position[1])
+
+
+@pytest.mark.parametrize(
+    ("position", "velocity"),
+    [
+        ((4.999999999998739, 3.451163556774521e-12, 0.0), (1.78e-13, 0.4472135954999815, 0.0)),
+        ((5.900000000000648, -5.83032816205074e-08, 0.0), (-3.6e-13, 0.4116934847963064, 0.0)),
+        ((6.0, 0.0, 0.0), (0.0, 0.408248290463863, 0.0)),
+    ],
+)
+def test_starts_a_hair_beside_unstable_circles(position, velocity):
+    """Turning points 1e-6 apart or complex by as little: enclosed, and E and L come back."""
+    orbit = Orbit(position=position, velocity=velocity)
+    states = orbit.at([50.0, -50.0])
+
+    assert np.all(np.isfinite(states.position))
+    again = Orbit(position=states.position[0], velocity=states.velocity[0])
+    assert again.energy_minus_one.value == pytest.approx(orbit.energy_minus_one.value, rel=1e-13)
+    assert again.angular_momentum.value == pytest.approx(orbit.angular_momentum.value, rel=1e-14)
