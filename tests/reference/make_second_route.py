@@ -93,7 +93,10 @@ def invariants(orbit: dict[str, Any], digits: int) -> tuple[Any, Any, Any, bool,
 
 def one(orbit: dict[str, Any]) -> dict[str, Any]:
     """A directly integrated orbit, ready to store."""
-    first, second = rows(orbit, 50), rows(orbit, 56, 46)
+    try:
+        first, second = rows(orbit, 50), rows(orbit, 56, 46)
+    except ArithmeticError as reason:
+        raise ArithmeticError(f"{orbit['name']}: {reason}") from reason
     agreement = max(difference(a, b) for a, b in zip(first, second, strict=True))
     return {**orbit, "agreement": agreement, "states": second}
 
@@ -172,6 +175,7 @@ def end(orbit: dict[str, Any]) -> dict[str, str] | None:
     base = orbit["name"].split("/")[0]
     falls = ("plunge", "capture", "radial-in", "radial-back", "radial-rest", "light-capture")
     falls += ("plunge-proper", "radial-rest-proper", "light-radial-in", "parabolic-capture")
+    falls += ("light-trapped",)
     if base not in falls:
         return None
     ingoing = orbit["chart"] in table.CHARTS[3:]

@@ -134,10 +134,9 @@ class Geodesic:
         if not self.massive:
             # g_tt + 2 g_tn k (n.d) + k^2 (alpha d.d + beta (n.d)^2) = 0; larger root.
             mixed, square = g_tn * dot(n, v), alpha * dot(v, v) + beta * dot(n, v) ** 2
-            if square == 0:
-                size = -g_tt / (2 * mixed)
-            else:
-                size = (-mixed + a.sqrt(mixed * mixed - square * g_tt)) / square
+            root = a.sqrt(mixed * mixed - square * g_tt)
+            # the square vanishes for radial light in Eddington-Finkelstein time
+            size = -g_tt / (mixed + root) if mixed > 0 else (root - mixed) / square
             v = [size * vi for vi in v]
         radial = dot(n, v)
         lowered = [g_tn * n[i] + alpha * v[i] + beta * radial * n[i] for i in range(3)]
@@ -189,22 +188,33 @@ class Geodesic:
         return [s.c for s in x], [s.c for s in p], t.c
 
     def _step(self, x: list[Any], p: list[Any], t: Any) -> Any:
-        """Largest parameter step at which the last terms vanish in the tolerance."""
-        best = None
+        """Largest parameter step at which the last terms vanish in the tolerance.
+
+        The size of a momentum that passes through zero is what it gains over the step.
+        """
         with mpmath.workprec(64):
-            for vector, lowest in ((x, 0), (p, 0), ([t], 1)):
-                size = sum(abs(float(c[lowest])) for c in vector)
-                for k in (self.order - 1, self.order):
-                    last = sum(abs(mpmath.mpf(self._wide(c[k]))) for c in vector)
-                    if last == 0 or size == 0:
-                        continue
-                    ratio = mpmath.mpf(self._wide(self.tolerance)) * size / last
-                    h = ratio ** (mpmath.mpf(1) / (k - lowest))
-                    best = h if best is None or h < best else best
+            best = self._reach(x, mpmath.mpf(0), 0)
+            gain = mpmath.mpf(0)
+            if best is not None:
+                gain = best * sum(abs(self._wide(c[1])) for c in p)
+            for vector, extra, lowest in ((p, gain, 0), ([t], mpmath.mpf(0), 1)):
+                h = self._reach(vector, extra, lowest)
+                best = h if best is None or (h is not None and h < best) else best
             assert best is not None
-            best = mpmath.mpf("0.9") * best
-        man, exp = mpmath.frexp(best)
+            man, exp = mpmath.frexp(mpmath.mpf("0.9") * best)
         return self.arithmetic.number(Fraction(float(man)) * Fraction(2) ** int(exp))
+
+    def _reach(self, vector: list[Any], extra: Any, lowest: int) -> Any:
+        """Step for one vector of series, against the size of its coefficients ``lowest``."""
+        size = extra + sum(abs(self._wide(c[lowest])) for c in vector)
+        best = None
+        for k in (self.order - 1, self.order):
+            last = sum(abs(self._wide(c[k])) for c in vector)
+            if last and size:
+                ratio = self._wide(self.tolerance) * size / last
+                h = ratio ** (mpmath.mpf(1) / (k - lowest))
+                best = h if best is None or h < best else best
+        return best
 
     def _wide(self, x: Any) -> Any:
         """A number as an mpf of few bits (float64 would underflow)."""

@@ -14,16 +14,31 @@ import mpmath
 from mpmath import mp
 
 
-def turning_points(energy: Any, momentum: Any) -> list[Any]:
-    """Inverse radii where dr/dtau = 0, ascending (massive particles)."""
+def turning_points(energy: Any, momentum: Any, massive: bool = True) -> list[Any]:
+    """Inverse radii where dr/dtau = 0, ascending: real roots of the cubic (Cardano, Viete).
+
+    u^3 - u^2/2 + mu u/L^2 + (E^2 - mu)/(2 L^2) = 0, u = x + 1/6, x^3 + P x + Q = 0; at thrice the
+    digits, because u1 and u2 are small beside the third root.
+    """
+    mu = 1 if massive else 0
     square = momentum**2
     if square == 0:
-        return [(1 - energy**2) / 2] if energy < 1 else []
-    found = mpmath.polyroots(
-        [2 * square, -square, 2, energy**2 - 1], maxsteps=400, extraprec=4 * mp.prec
-    )
-    real = [mpmath.re(z) for z in found if abs(mpmath.im(z)) < mpmath.mpf(10) ** (-mp.dps // 2)]
-    return sorted(real)
+        return [(1 - energy**2) / 2] if mu and energy < 1 else []
+    with mp.workdps(3 * mp.dps):
+        linear = mu / square
+        p = linear - mpmath.mpf(1) / 12
+        q = linear / 6 - mpmath.mpf(1) / 108 + (energy**2 - mu) / (2 * square)
+        if 4 * p**3 + 27 * q**2 <= 0:
+            size = 2 * mpmath.sqrt(-p / 3)
+            angle = mpmath.acos(3 * q / (p * size)) / 3
+            x = [size * mpmath.cos(angle - 2 * mpmath.pi * k / 3) for k in range(3)]
+        else:
+            root = mpmath.sqrt(q**2 / 4 + p**3 / 27)
+            cube = -q / 2 - root if q > 0 else -q / 2 + root
+            c = mpmath.sign(cube) * mpmath.cbrt(abs(cube))
+            x = [c - p / (3 * c)]
+        found = sorted(r + mpmath.mpf(1) / 6 for r in x)
+    return [+u for u in found]
 
 
 def periods(energy: Any, momentum: Any) -> dict[str, Any]:
@@ -94,7 +109,8 @@ def time_to(
     with mp.workdps(fine):
         top = mpmath.mpf(start)
         if outward:
-            top = min(1 / u for u in turning_points(energy, momentum) if u > 0 and 1 / u > start)
+            turns = [1 / u for u in turning_points(energy, momentum, massive) if u > 0]
+            top = min(r for r in turns if r > start)
         horizon, outer, inner = (mpmath.sqrt(top - q) for q in (2, start, target))
 
     def leg(kind: str, far: Any) -> Any:

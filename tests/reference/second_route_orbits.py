@@ -96,6 +96,7 @@ EARLY: dict[str, list[float]] = {
     "light-trapped/painleve-gullstrand": [4.0, 11.0, 12.75, -1.5],
     "light-trapped/eddington-finkelstein": [4.0, 10.0, 11.625, -1.5],
     "light-radial-in/painleve-gullstrand": [2.0, 4.0, 7.0, -20.0],
+    "light-inside/eddington-finkelstein": [0.125, 0.25, -0.3125],
     "light-critical/eddington-finkelstein": [10.0, 25.0, 60.0, -0.75],
 }
 
@@ -164,6 +165,21 @@ def _degenerate() -> list[dict[str, Any]]:
             "parabolic-radial-out/areal", "areal", [8.0, 0, 0], [3 / 8, 0, 0], [9.0, 1e3, -12.0]
         ),
     ]
+    return orbits
+
+
+def _inside() -> list[dict[str, Any]]:
+    """Starts between the horizon and r = 0, in the ingoing charts."""
+    orbits = []
+    for chart, x, v in (
+        ("kerr-schild", [1.25, 0.5, 0.25], [-0.75, 0.25, 0.0]),
+        ("painleve-gullstrand", [1.0, 1.0, -0.5], [-1.25, -0.75, 0.5]),
+        ("eddington-finkelstein", [1.5, 0.0, 0.25], [-0.5, 0.25, 0.125]),
+    ):
+        orbits += [
+            _exact(f"inside/{chart}", chart, x, v, [0.125, 0.375, -0.5]),
+            _exact(f"light-inside/{chart}", chart, x, v, [0.125, 0.25, -0.5], particle="light"),
+        ]
     return orbits
 
 
@@ -270,7 +286,7 @@ def orbits() -> list[dict[str, Any]]:
                 continue  # ingoing radial light stands still in that chart's time: refused
             orbit = _carried(chart, *start, particle)
             found.append({"name": f"{name}/{chart}", **orbit, "clock": clock, "times": times})
-    found += _degenerate() + _beside() + _weak()
+    found += _degenerate() + _inside() + _beside() + _weak()
     defaults = {"system": "geometric", "gm": 1.0, "particle": "massive", "clock": "coordinate"}
     for orbit in found:
         orbit["times"] = list(EARLY.get(orbit["name"], orbit["times"]))
