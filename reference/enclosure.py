@@ -192,12 +192,17 @@ class Enclosure:
                 words += [high, ball_to_float(ball - arb(high))]
         return ball_to_float(balls[0]), np.array(words[:4]), np.array(words[4:])
 
-    def plane(self) -> Floats:
-        """The frame's unit vectors rounded, (3, 2)."""
+    def plane(self) -> tuple[Floats, Floats]:
+        """The frame's unit vectors, (3, 2), as two words."""
         with working(256):
             frame = self.frame.balls()
-            columns = [[ball_to_float(c) for c in axis] for axis in (frame.radial, frame.across)]
-        return np.array(columns).T.copy()
+            axes = (frame.radial, frame.across)
+            high = [[ball_to_float(c) for c in axis] for axis in axes]
+            low = [
+                [ball_to_float(c - arb(h)) for c, h in zip(axis, words, strict=True)]
+                for axis, words in zip(axes, high, strict=True)
+            ]
+        return np.array(high).T.copy(), np.array(low).T.copy()
 
     def _sample(self, precision: int, clock: str, elapsed: fmpq, digits: int) -> Sample | None:
         try:

@@ -380,8 +380,8 @@ class Orbit:
         low, words, turn = found
         return low, low + words[0], words, turn
 
-    def plane(self) -> Floats:
-        """Unit vectors of the start's radius and across it, (3, 2)."""
+    def plane(self) -> tuple[Floats, Floats]:
+        """Unit vectors of the start's radius and across it, (3, 2), as two words."""
         return self._enclosure.plane()
 
     def _pack(self, stamps: Floats, samples: list[Sample]) -> States:

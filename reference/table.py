@@ -28,6 +28,8 @@ _MAX_INTERVALS = 20_000
 #: position, velocity, clock.
 _GOAL = np.array([0.5, 1.0, 0.5])
 _EPS = float(np.finfo(np.float64).eps)
+#: Largest change over an interval, relative to the size: keeps Horner's rounding small.
+_SPREAD = 0.25
 #: Rounding of the evaluation in the same units: reduction, Horner's rule, rotation (measured).
 _ROUNDING = 3.5
 
@@ -56,6 +58,7 @@ class Table:
     period: Floats
     turn: Floats
     frame: Floats
+    frame_low: Floats
     error: Floats
 
     def at(self, times: npt.ArrayLike) -> tuple[Floats, Floats, Floats]:
@@ -80,7 +83,7 @@ class Table:
         clock = np.empty(stamps.size)
         fill(
             stamps, self.start, self.edges, self.centres, self.scales, self.coefficients,
-            self.period, self.turn, self.frame, position, velocity, clock,
+            self.period, self.turn, self.frame, self.frame_low, position, velocity, clock,
         )  # fmt: skip
         return position, velocity, clock
 
@@ -129,7 +132,9 @@ class _Fitter:
                 error[:, 4].max() / size[2],
             ]
         )
-        if np.any(relative > _GOAL * _EPS):
+        moved = np.linalg.norm(change[:, :2], axis=1).max() / size[0]
+        turned = np.linalg.norm(change[:, 2:4], axis=1).max() / size[1]
+        if np.any(relative > _GOAL * _EPS) or moved > _SPREAD or turned > 2 * _SPREAD:
             return None
         self.worst = np.maximum(self.worst, relative)
         powers[0] += base
@@ -184,6 +189,7 @@ def build_table(orbit: Orbit, first: float, last: float) -> Table:
         waiting += [(middle, b), (a, middle)]
         if len(done) + len(waiting) > _MAX_INTERVALS or not a < middle < b:
             raise ArithmeticError("the table does not reach the accuracy of float64")
+    frame, frame_low = orbit.plane()
     edges = np.array([a for a, _, _ in done] + [done[-1][1]])
     return Table(
         start=orbit.start_time,
@@ -195,7 +201,8 @@ def build_table(orbit: Orbit, first: float, last: float) -> Table:
         coefficients=np.ascontiguousarray(np.array([p for _, _, p in done])),
         period=period,
         turn=turn,
-        frame=orbit.plane(),
+        frame=frame,
+        frame_low=frame_low,
         error=2 * fitter.worst + _ROUNDING * _EPS,
     )
 

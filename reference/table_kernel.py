@@ -59,6 +59,20 @@ def _find(edges: Floats, time: float, guess: int) -> int:
 
 
 @njit(cache=True, error_model="numpy")
+def _turned(frame: Floats, low: Floats, c: float, s: float, out: Floats) -> None:
+    """``frame`` turned by an angle: (3, 2, 2), each entry as two words."""
+    for row in range(3):
+        for column in range(2):
+            first, second = (0, 1) if column == 0 else (1, 0)
+            sign = s if column == 0 else -s
+            p, e = _two_product(frame[row, first], c)
+            q, f = _two_product(frame[row, second], sign)
+            high, rest = _two_sum(p, q)
+            rest += e + f + low[row, first] * c + low[row, second] * sign
+            out[row, column, 0], out[row, column, 1] = _two_sum(high, rest)
+
+
+@njit(cache=True, error_model="numpy")
 def fill(
     times: Floats,
     start: float,
@@ -69,6 +83,7 @@ def fill(
     period: Floats,
     turn: Floats,
     frame: Floats,
+    frame_low: Floats,
     position: Floats,
     velocity: Floats,
     clock: Floats,
@@ -85,13 +100,13 @@ def fill(
         Radial period and the clock's advance over it, each as two words; zero if none.
     turn : (2,)
         Azimuth per period modulo 2 pi, as two words.
-    frame : (3, 2)
-        Unit vectors of the orbit's plane.
+    frame, frame_low : (3, 2)
+        Unit vectors of the orbit's plane, as two words.
     """
     degree = coefficients.shape[1] - 1
-    index, known = 0, -1.0e300
-    m00, m01, m10 = frame[0, 0], frame[0, 1], frame[1, 0]
-    m11, m20, m21 = frame[1, 1], frame[2, 0], frame[2, 1]
+    index, known = 0, 0.0
+    turned = np.zeros((3, 2, 2))
+    _turned(frame, frame_low, 1.0, 0.0, turned)
     for row in range(times.size):
         high, low = _two_sum(times[row], -start)
         turns = 0.0
@@ -112,12 +127,7 @@ def fill(
             q, f = _two_product(whole, 6.283185307179586)
             angle = (p - q) + (e - f + turns * turn[1] - whole * 2.4492935982947064e-16)
             c, s = cos(angle), sin(angle)
-            m00 = frame[0, 0] * c + frame[0, 1] * s
-            m01 = frame[0, 1] * c - frame[0, 0] * s
-            m10 = frame[1, 0] * c + frame[1, 1] * s
-            m11 = frame[1, 1] * c - frame[1, 0] * s
-            m20 = frame[2, 0] * c + frame[2, 1] * s
-            m21 = frame[2, 1] * c - frame[2, 0] * s
+            _turned(frame, frame_low, c, s, turned)
             known = turns
         index = _find(edges, high, index)
         x = ((high - centres[index]) + low) * scales[index]
@@ -132,12 +142,11 @@ def fill(
             va = va * x + coefficients[index, k, 2]
             vb = vb * x + coefficients[index, k, 3]
             tau = tau * x + coefficients[index, k, 4]
-        position[row, 0] = m00 * a + m01 * b
-        position[row, 1] = m10 * a + m11 * b
-        position[row, 2] = m20 * a + m21 * b
-        velocity[row, 0] = m00 * va + m01 * vb
-        velocity[row, 1] = m10 * va + m11 * vb
-        velocity[row, 2] = m20 * va + m21 * vb
+        for k in range(3):
+            low_part = turned[k, 0, 1] * a + turned[k, 1, 1] * b
+            position[row, k] = turned[k, 0, 0] * a + (turned[k, 1, 0] * b + low_part)
+            low_part = turned[k, 0, 1] * va + turned[k, 1, 1] * vb
+            velocity[row, k] = turned[k, 0, 0] * va + (turned[k, 1, 0] * vb + low_part)
         p, e = _two_product(turns, period[2])
         s2, r2 = _two_sum(p, tau)
         clock[row] = s2 + (r2 + e + turns * period[3])

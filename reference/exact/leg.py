@@ -331,9 +331,9 @@ class Leg:
             side = -1
         # Near a turning point v pins the place down, elsewhere u does: take the tighter.
         found: list[Place] = []
-        for find in (lambda: piece.find_u(u0, side), lambda: piece.find_v(v0)):
+        for by_u in (True, False):
             try:
-                place = self.place(index, find())
+                place = self.place(index, piece.find_u(u0, side) if by_u else piece.find_v(v0))
             except NotCovered:
                 continue
             if place.point.u.overlaps(u0) and place.point.v.overlaps(v0):
