@@ -103,6 +103,10 @@ def check(
     from truefall.validate.budget import parse_budget_options
 
     table = parse_budget_options(budget)
+    if "" in files:
+        raise UsageError("an empty file name; is a variable of the shell unset?")
+    if report is not None and os.path.exists(report) and not os.path.isdir(report):
+        raise InputError("is a file; name a folder for the report", report)
     if orbit_file is not None:
         from truefall.validate.orbit_file import parse_orbit, read_mapping
 
@@ -170,6 +174,8 @@ def _writable(target: str) -> None:
     from truefall.validate.formats import suffix_of
 
     try:
+        if not target:
+            raise UsageError("an empty name for the output; is a variable of the shell unset?")
         suffix_of(target)
     except InputError as error:
         raise UsageError(f"the output {error}") from None
@@ -255,17 +261,18 @@ def cases(show: str | None, as_json: bool) -> int:
     """List the catalogue of reference orbits."""
     from truefall.validate.cases import case, load_cases, show_case
 
-    if show is not None:
-        say(show_case(case(show)))
-        return 0
-    catalogue = load_cases()
+    catalogue = load_cases() if show is None else (case(show),)
     if as_json:
         rows = [
             {"name": c.name, "class": c.orbit_class, "title": c.title, "level": c.level,
-             "why": c.why, "samples": len(c.spec.times or ())}
+             "why": c.why, "scenario": c.scenario, "samples": len(c.spec.times or ()),
+             "orbit_file": c.orbit_file}
             for c in catalogue
         ]  # fmt: skip
         say(json.dumps(rows, indent=1))
+        return 0
+    if show is not None:
+        say(show_case(catalogue[0]))
         return 0
     wide = max(len(c.name) for c in catalogue)
     for c in catalogue:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import replace
+from functools import cache
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -26,7 +27,9 @@ CLASSES = {
 ALL = [pytest.param(c, id=c.name) for c in load_cases()]
 
 
-def states(chosen: Case) -> tuple[Orbit, States]:
+@cache
+def states_of(name: str) -> tuple[Orbit, States]:
+    chosen = case(name)
     orbit = chosen.spec.orbit()
     return orbit, orbit.at(np.array(chosen.spec.times))
 
@@ -64,7 +67,7 @@ def test_every_case_has_samples_words_and_a_budget_that_parses(chosen: Case) -> 
 @pytest.mark.parametrize("chosen", ALL)
 def test_budget_can_be_met_with_float64_output(chosen: Case) -> None:
     """A budget below the spacing of the numbers that the file holds could never pass."""
-    _, found = states(chosen)
+    _, found = states_of(chosen.name)
     budget = parse_budget(chosen.spec.budget, chosen.spec.system, chosen.name)
     spacing = float(np.max(np.spacing(np.linalg.norm(found.position, axis=1))))
     assert budget.absolute["position"] > 4 * spacing
@@ -100,7 +103,7 @@ def test_fall_with_energy_one_ends_after_32_thirds() -> None:
 
 def test_unstable_circle_and_light_ring_stay_exactly() -> None:
     for name, radius in (("circular-unstable", 4.0), ("light-circular", 3.0)):
-        _, found = states(case(name))
+        _, found = states_of(name)
         assert np.all(found.radius == radius)
 
 
@@ -116,7 +119,7 @@ def test_separatrix_neighbours_part_and_the_exact_one_stays() -> None:
 @pytest.mark.parametrize("name", ["whirl-inward-harmonic", "whirl-inward"])
 def test_separatrix_twins_are_one_orbit(name: str) -> None:
     """Harmonic r - 1 and areal r differ by one at every moment (same time coordinate)."""
-    _, found = states(case(name))
+    _, found = states_of(name)
     shift = 1.0 if name.endswith("harmonic") else 0.0
     other = case("whirl-inward").spec.orbit().at(np.array(case(name).spec.times))
     size = np.linalg.norm(found.position, axis=1)
@@ -147,16 +150,16 @@ def test_solar_limb_bends_light_by_1_75_arcseconds() -> None:
 
 
 def test_proper_and_chart_clock_differ_by_what_the_stories_say() -> None:
-    _, strong = states(case("bound-proper-time"))
+    _, strong = states_of("bound-proper-time")
     assert strong.coordinate_time is not None
     assert strong.coordinate_time[-1] / strong.time[-1] == pytest.approx(1.15, abs=0.01)
-    _, weak = states(case("earth-satellite-proper"))
+    _, weak = states_of("earth-satellite-proper")
     assert weak.coordinate_time is not None
     assert weak.coordinate_time[-1] - weak.time[-1] == pytest.approx(139e-6, abs=1e-6)
 
 
 def test_million_revolutions_start_again_at_the_periapsis() -> None:
-    _, found = states(case("bound-million-revolutions"))
+    _, found = states_of("bound-million-revolutions")
     periapsis = 10.0 / 1.3
     assert abs(found.radius[2] - periapsis) < 1e-3
     assert found.winding[1] > 1e6
@@ -175,7 +178,9 @@ def test_what_make_writes_check_passes_and_twice_the_budget_fails(
     from truefall.validate.make import make
 
     suffix = ".h5" if len(chosen.name) % 2 else ".csv"
-    made = make(chosen.spec, tmp_path / f"exact{suffix}")
+    times = chosen.spec.times or ()
+    some = times if len(times) < 20 else (*times[: -1 : len(times) // 20], times[-1])
+    made = make(replace(chosen.spec, times=some), tmp_path / f"exact{suffix}")
     (result,) = check_file(made.path, budget=dict(chosen.spec.budget))
     assert result.verdict == "pass", result.reason
     assert result.orbit is not None

@@ -51,6 +51,8 @@ def test_2_wrong_command_line(run: Run, exact: Path, tmp_path: Path) -> None:
         ["check", exact, "--start-time", "inf"],
         ["check", exact, "--fit", "--against", exact],
         ["check", exact, "--no-such-option"],
+        ["check", ""],
+        ["make", exact.with_suffix(".toml"), "--out", ""],
         ["make", "--out", tmp_path / "a.csv"],
         ["make", exact.with_suffix(".toml"), "--case", "radial-fall", "--out", tmp_path / "a.csv"],
         ["make", "--case", "no-such-case", "--out", tmp_path / "a.csv"],

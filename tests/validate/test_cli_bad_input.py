@@ -218,6 +218,14 @@ def test_make_refuses_a_place_where_it_cannot_write(run: Run, tmp_path: Path, ta
     assert sorted(p.name for p in tmp_path.iterdir()) == ["folder.csv", "probe.toml"]
 
 
+def test_a_report_where_a_file_is_is_refused_before_judging(run: Run, tmp_path: Path) -> None:
+    path = write(tmp_path / "run.csv", table(*ROWS))
+    done = run("check", path, "--report", path)
+    assert done.status == 4
+    assert done.out == ""
+    assert "is a file; name a folder" in done.err
+
+
 def test_an_older_result_survives_a_refusal(run: Run, tmp_path: Path) -> None:
     path = write(tmp_path / "probe.toml", ORBITS["past the end"][0])
     old = write(tmp_path / "out.csv", "precious\n")

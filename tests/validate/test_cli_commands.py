@@ -90,3 +90,14 @@ def test_cases_as_a_table_as_a_story_and_as_json(run: Run) -> None:
     told = run("cases", "--show", rows[0]["name"])
     assert rows[0]["title"] in told.out
     assert "[start]" in told.out
+    (alone,) = json.loads(run("cases", "--show", rows[0]["name"], "--json").out)
+    assert alone == rows[0]
+
+
+def test_a_case_shown_as_an_orbit_file_makes_the_same_trajectory(run: Run, tmp_path: Path) -> None:
+    (alone,) = json.loads(run("cases", "--show", "light-critical", "--json").out)
+    (tmp_path / "light-critical.toml").write_text(alone["orbit_file"])
+    outs = [tmp_path / "a.csv", tmp_path / "b.csv"]
+    assert run("make", tmp_path / "light-critical.toml", "--out", outs[0]).status == 0
+    assert run("make", "--case", "light-critical", "--out", outs[1]).status == 0
+    assert outs[0].read_bytes() == outs[1].read_bytes()

@@ -33,6 +33,11 @@ class Case:
     spec: OrbitSpec
     text: str
 
+    @property
+    def orbit_file(self) -> str:
+        """The orbit file alone, as text."""
+        return self.text[: self.text.index("[case]")].rstrip() + "\n"
+
 
 def _parse(name: str, text: str) -> Case:
     mapping = tomllib.loads(text)
@@ -78,8 +83,7 @@ def case(name: str) -> Case:
 
 def show_case(chosen: Case) -> str:
     """The story of a case, and its orbit file."""
-    body = chosen.text[: chosen.text.index("[case]")].rstrip()
     parts = [f"{chosen.name}: {chosen.title}", f"class {chosen.orbit_class}, level {chosen.level}"]
     for label, words in (("why it is hard", chosen.why), ("scenario", chosen.scenario)):
         parts.append("\n".join(textwrap.wrap(f"{label}: {words}", 80)))
-    return "\n\n".join(["\n".join(parts[:2]), *parts[2:], body])
+    return "\n\n".join(["\n".join(parts[:2]), *parts[2:], chosen.orbit_file.rstrip()])
