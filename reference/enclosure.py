@@ -168,6 +168,17 @@ class Enclosure:
                     out[k, j] = high, ball_to_float(ball - arb(high))
         return out
 
+    def azimuths(self, clock: str, elapsed: list[fmpq]) -> list[float]:
+        """Azimuth since the start at exact elapsed times."""
+        found = []
+        for time in elapsed:
+            ball = self.first_that(
+                lambda s, t=time: s.at(clock, t).azimuth,  # type: ignore[misc]
+                lambda b: bool(b.is_finite()) and float(b.rad()) < 1e-3,
+            )
+            found.append(ball_to_float(ball))
+        return found
+
     def reduction(self, clock: str, other: str) -> tuple[float, Floats, Floats] | None:
         """First elapsed time of the period that holds the start, the period's words, the turn's."""
 

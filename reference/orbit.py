@@ -361,6 +361,11 @@ class Orbit:
         clock = "chart" if self.clock == "proper" else "tau"
         return self._enclosure.planar(self._engine_clock, clock, exact)
 
+    def planar_azimuth(self, elapsed: Floats) -> Floats:
+        """Azimuth since the start at elapsed times, (n,), radians."""
+        exact = [rational(Fraction(float(t)) / self._time) for t in elapsed]
+        return np.array(self._enclosure.azimuths(self._engine_clock, exact))
+
     def reduction(self) -> tuple[float, float, Floats, Floats] | None:
         """One radial period in elapsed time and what it adds, each as two words; None if none.
 

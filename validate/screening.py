@@ -1,0 +1,135 @@
+"""Long files: every row by the table, the rows that decide by the exact solution.
+
+A file of many thousand rows is first compared with the polynomial table of its orbit, whose
+error bound is a few units in the last place.  The rows that could decide the verdict (the
+largest errors, the rows that the table's bound leaves undecided) and sixteen random ones are
+then computed exactly and put in place of the table's values.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import replace
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+import numpy.typing as npt
+
+from truefall.validate.compare import Comparison, Expected
+
+if TYPE_CHECKING:
+    from truefall.reference import Orbit
+    from truefall.reference.table import Table
+    from truefall.validate.budget import Judgement
+
+__all__ = ["MANY_ROWS", "decisive_rows", "replaced", "tabled_expected"]
+
+Floats = npt.NDArray[np.float64]
+
+#: From this many rows on a table pays (it costs about as much as two thousand exact rows).
+MANY_ROWS = 5000
+_MOST_EXACT = 4000
+_RANDOM = 16
+
+
+def tabled_expected(orbit: Orbit, times: Floats) -> Expected | None:
+    """Expected values from a table of the orbit, or None where no table can be made."""
+    from truefall.reference.table import build_table
+
+    try:
+        table = build_table(orbit, float(times.min()), float(times.max()))
+    except ArithmeticError:
+        return None
+    position, velocity, clock = table.at(times)
+
+    def bound(vectors: Floats, share: float) -> Floats:
+        size = np.linalg.norm(vectors, axis=1, keepdims=True)
+        return np.broadcast_to(size * share, vectors.shape)
+
+    # the clock's error is measured against its interval's readings, at most twice the width
+    width = float(np.max(np.diff(table.edges)))
+    speeds = np.linalg.norm(velocity, axis=1)
+    fastest = np.maximum(speeds, 1e-3 * speeds.max())[:, None]
+    return Expected(
+        position=position,
+        position_low=np.zeros_like(position),
+        position_bound=bound(position, float(table.error[0])),
+        velocity=velocity,
+        velocity_low=np.zeros_like(velocity),
+        velocity_bound=np.broadcast_to(fastest * table.error[1], velocity.shape),
+        clock=clock,
+        clock_low=np.zeros_like(clock),
+        clock_bound=float(table.error[2]) * (np.abs(clock) + 2 * width),
+        azimuth=_azimuth(orbit, table, times),
+        normal=orbit.angular_momentum_direction,
+    )
+
+
+def _azimuth(orbit: Orbit, table: Table, times: Floats) -> Floats:
+    """Azimuth since the start, good to a small part of a turn: for budgets per revolution.
+
+    Linear between exact values at the table's edges, which are a third of a radian apart at
+    most.
+    """
+    at_edges = orbit.planar_azimuth(table.edges)
+    elapsed = times - orbit.start_time
+    length = float(table.period[0])
+    if length == 0.0:
+        return np.interp(elapsed, table.edges, at_edges)
+    swept = orbit.azimuth_per_radial_period
+    assert swept is not None
+    turns = np.floor((elapsed - table.edges[0]) / length)
+    total: Floats = turns * swept.value + np.interp(
+        elapsed - turns * length, table.edges, at_edges
+    )
+    return total
+
+
+def decisive_rows(
+    comparison: Comparison, judgements: Sequence[Judgement], limits: Sequence[tuple[Floats, Floats]]
+) -> npt.NDArray[np.int64]:
+    """Rows to be computed exactly.
+
+    Parameters
+    ----------
+    comparison : Comparison
+    judgements : sequence of Judgement
+        Their rows, where margins are smallest, are among the result.
+    limits : sequence of (margin, guard) arrays
+        Rows whose distance from their tolerance is within the guard are among the result, the
+        closest first, a few thousand at most.
+    """
+    n = comparison.time.size
+    rng = np.random.default_rng(n)
+    rows = [rng.integers(0, n, _RANDOM), [0, n - 1, int(np.argmax(comparison.distance))]]
+    for series in (comparison.radial, comparison.along, comparison.cross):
+        rows.append([int(np.argmax(np.abs(series)))])
+    for error in (comparison.velocity_error, comparison.clock_error):
+        if error is not None:
+            rows.append([int(np.argmax(np.abs(error)))])
+    rows.append([j.row for j in judgements])
+    for margin, guard in limits:
+        open_ = np.flatnonzero(np.abs(margin) <= guard)
+        if open_.size > _MOST_EXACT:
+            open_ = open_[np.argsort(np.abs(margin[open_]))[:_MOST_EXACT]]
+        rows.append(open_)
+    return np.unique(np.concatenate([np.asarray(r, dtype=np.int64) for r in rows]))
+
+
+def replaced(table: Expected, rows: npt.NDArray[np.int64], exact: Expected) -> Expected:
+    """The table's values with some rows replaced by exact ones."""
+
+    def put(old: Floats | None, new: Floats | None) -> Floats | None:
+        if old is None or new is None:
+            return old
+        merged = np.array(old)
+        merged[rows] = new
+        return merged
+
+    names = [
+        f"{series}{kind}"
+        for series in ("position", "velocity", "clock")
+        for kind in ("", "_low", "_bound")
+    ]
+    changes: dict[str, Any] = {name: put(getattr(table, name), getattr(exact, name)) for name in names}
+    return replace(table, **changes)
