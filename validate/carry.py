@@ -24,6 +24,7 @@ __all__ = [
     "Spread",
     "carried_spread",
     "end_spread",
+    "fitted_spread",
     "move_start",
     "second_clock",
     "sensitivities",
@@ -32,6 +33,7 @@ __all__ = [
 
 Floats = npt.NDArray[np.float64]
 _TIMES = 64
+_FITTED_TIMES = 512
 #: Relative step of derivatives: far above float64's 2^-53, far below what is nonlinear.
 _STEP = 2.0**-40
 #: Smallest move of a start component, in units in its last place; smaller half units scale it.
@@ -93,8 +95,9 @@ def move_start(spec: OrbitSpec, orbit: Orbit, component: int, step: float) -> tu
 
 
 def sensitivities(spec: OrbitSpec, orbit: Orbit, times: Floats) -> Floats:
-    """``d position(t) / d start``, (n, 3, 6): columns position, then velocity.
+    """``d state(t) / d start``, (n, 7, 6).
 
+    Rows: position (3), velocity (3), second clock; columns: the start's position, velocity.
     NaN where a moved orbit ends before.
 
     Raises
@@ -106,13 +109,14 @@ def sensitivities(spec: OrbitSpec, orbit: Orbit, times: Floats) -> Floats:
     if spec.elements is not None:  # whose state is not exactly a float64 one
         orbit, _ = move_start(spec, orbit, 0, 0.0)
     base = orbit.at(times)
-    columns = np.full((times.size, 3, 6), np.nan)
+    columns = np.full((times.size, 7, 6), np.nan)
     for k in range(6):
         other, step = move_start(spec, orbit, k, _STEP * (sizes[k // 3] or sizes[0]))
         inside = other.reachable(times)
         if inside.any():
             here = base if inside.all() else orbit.at(times[inside])
-            columns[inside, :, k] = _difference(other.at(times[inside]), here)[0] / step
+            position, velocity, clock = _difference(other.at(times[inside]), here)
+            columns[inside, :, k] = np.column_stack([position, velocity, clock]) / step
     return columns
 
 
@@ -165,6 +169,30 @@ def carried_spread(spec: OrbitSpec, orbit: Orbit, times: Floats, quantum: Floats
         total += _component_spread(spec, orbit, base, int(k), float(quantum[k]))
     worst = np.minimum(np.maximum.accumulate(total, axis=1), _ANYWHERE)
     return Spread(*(np.interp(elapsed, elapsed[chosen], row) for row in worst))
+
+
+def fitted_spread(spec: OrbitSpec, orbit: Orbit, times: Floats, openness: Floats) -> Spread:
+    """What the digits of the fitted rows leave open about the states at ``times``.
+
+    Parameters
+    ----------
+    openness : (6, m)
+        Change of the fitted start by one half unit of each of the ``m`` numbers fitted; they
+        count as if all were wrong in the worst way.
+
+    Notes
+    -----
+    At most 512 of the times are followed; between them the larger neighbour counts.
+    """
+    if not np.any(openness):
+        return Spread.none(times.size)
+    picks = np.unique(np.linspace(0, times.size - 1, min(_FITTED_TIMES, times.size)).astype(int))
+    changes = sensitivities(spec, orbit, times[picks]) @ openness
+    sizes = np.nan_to_num(np.abs(changes).sum(axis=2), nan=_ANYWHERE)
+    rows = [np.linalg.norm(sizes[:, :3], axis=1), np.linalg.norm(sizes[:, 3:6], axis=1)]
+    right = np.searchsorted(picks, np.arange(times.size))
+    left = np.maximum(right - (picks[right] > np.arange(times.size)), 0)
+    return Spread(*(np.maximum(row[left], row[right]) for row in [*rows, sizes[:, 6]]))
 
 
 def stamp_spread(orbit: Orbit, times: Floats, quantum: float) -> Spread:

@@ -12,13 +12,13 @@ import numpy.typing as npt
 
 from truefall.validate.against import load_stored, stored_expected
 from truefall.validate.budget import Judgement, overall, parse_budget
-from truefall.validate.carry import carried_spread, end_spread, second_clock, stamp_spread
+from truefall.validate.carry import end_spread, second_clock, stamp_spread
 from truefall.validate.compare import Comparison, Expected, compare
 from truefall.validate.drift import drifts_of
 from truefall.validate.errors import InputError, UsageError
 from truefall.validate.growth import Growth, growth_of
 from truefall.validate.judging import Floor, floor_of, judgements_of, position_tolerance
-from truefall.validate.starts import find_start, quantum_of_start
+from truefall.validate.starts import Start, find_start
 
 if TYPE_CHECKING:
     from truefall.reference import Orbit
@@ -196,15 +196,15 @@ def check_trajectory(
         If it cannot be judged at all.
     """
     stored = None if against is None else load_stored(against, trajectory)
-    spec, start_from = find_start(trajectory, fit=fit, stored=stored)
+    start = find_start(trajectory, fit=fit, stored=stored)
+    spec = start.spec
     budget = parse_budget(trajectory.metadata.get("budget", {}), spec.system, trajectory.path)
     orbit = spec.orbit()
-    quantum = quantum_of_start(trajectory, start_from)
     inside = orbit.reachable(trajectory.time)
-    beyond, past = _beyond(spec, orbit, trajectory, inside, quantum)
+    beyond, past = _beyond(spec, orbit, trajectory, inside, start.half_units)
     result = CheckResult(
         trajectory.path, trajectory.name, beyond, past, trajectory, spec, orbit,
-        samples=len(trajectory), start_from=start_from,
+        samples=len(trajectory), start_from=start.source,
         reference="exact" if against is None else f"stored: {against}",
     )  # fmt: skip
     if not inside.any():
@@ -214,13 +214,13 @@ def check_trajectory(
         expected = _expected(orbit, kept.time)
     else:
         expected = stored_expected(stored, orbit, inside, bool(budget.per_revolution))
-    comparison = _compare(kept, spec, orbit, expected, quantum)
+    comparison = _compare(kept, start, orbit, expected)
     radius = _areal_radius(spec, expected)
     floor, judged = floor_of(comparison, position_tolerance(comparison, budget, radius))
     judgements = judgements_of(
         comparison, budget, judged, trajectory.path, spec.particle == "light"
     )
-    verdict, reason = _verdict(trajectory, start_from, spec, judgements, beyond, past)
+    verdict, reason = _verdict(trajectory, start.source, spec, judgements, beyond, past)
     return replace(
         result,
         verdict=verdict,
@@ -237,22 +237,20 @@ def check_trajectory(
     )
 
 
-def _compare(
-    kept: Trajectory, spec: OrbitSpec, orbit: Orbit, expected: Expected, quantum: Floats
-) -> Comparison:
+def _compare(kept: Trajectory, start: Start, orbit: Orbit, expected: Expected) -> Comparison:
     drifts = drifts_of(
         kept,
         energy_minus_one=orbit.energy_minus_one.value,
         momentum=orbit.angular_momentum.value,
         normal=expected.normal,
-        start_open=bool(np.any(quantum)),
+        start_open=start.is_open,
     )
     return compare(
         kept,
         expected,
         drifts=drifts,
         stamps=stamp_spread(orbit, kept.time, kept.quantisation.time),
-        carried=carried_spread(spec, orbit, kept.time, quantum),
+        carried=start.spread(orbit, kept.time),
     )
 
 

@@ -2,27 +2,64 @@
 
 from __future__ import annotations
 
-from dataclasses import replace
+from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
 import numpy.typing as npt
 
+from truefall.validate.carry import Spread, carried_spread, fitted_spread
 from truefall.validate.errors import InputError
 
 if TYPE_CHECKING:
+    from truefall.reference import Orbit
     from truefall.validate.orbit_file import OrbitSpec
     from truefall.validate.trajectory import Trajectory
 
-__all__ = ["find_start", "quantum_of_start"]
+__all__ = ["Start", "find_start"]
 
 Floats = npt.NDArray[np.float64]
 
 
-def find_start(
-    trajectory: Trajectory, *, fit: bool, stored: Trajectory | None
-) -> tuple[OrbitSpec, str]:
-    """The orbit, and where its start is from.
+@dataclass(frozen=True)
+class Start:
+    """A start, where it is from, and how open it is.
+
+    Attributes
+    ----------
+    spec : OrbitSpec
+    source : str
+        "stored set", "fit", "orbit file" or "first row".
+    quantum : (6,)
+        Half units of the last digits of position and velocity of a first row, else zeros.
+    openness : (6, m)
+        Change of a fitted start by half a unit of each fitted number and of float64, else zeros.
+    """
+
+    spec: OrbitSpec
+    source: str
+    quantum: Floats = field(default_factory=lambda: np.zeros(6))
+    openness: Floats = field(default_factory=lambda: np.zeros((6, 1)))
+
+    @property
+    def is_open(self) -> bool:
+        """Whether the file's digits leave the start open."""
+        return bool(np.any(self.quantum) or np.any(self.openness))
+
+    @property
+    def half_units(self) -> Floats:
+        """How far each component may be wrong, (6,)."""
+        return np.asarray(self.quantum + np.abs(self.openness).sum(axis=1))
+
+    def spread(self, orbit: Orbit, times: Floats) -> Spread:
+        """What that leaves open about the states at ``times``."""
+        if np.any(self.openness):
+            return fitted_spread(self.spec, orbit, times, self.openness)
+        return carried_spread(self.spec, orbit, times, self.quantum)
+
+
+def find_start(trajectory: Trajectory, *, fit: bool, stored: Trajectory | None) -> Start:
+    """The orbit to hold a trajectory against.
 
     In this order: the stored set held against, the best fit if asked for, the declared start
     (orbit file, header or sidecar), the first row.
@@ -35,14 +72,15 @@ def find_start(
     from truefall.validate.orbit_file import parse_orbit
 
     if stored is not None:
-        return parse_orbit(_declared(stored), stored.path), "stored set"
+        return Start(parse_orbit(_declared(stored), stored.path), "stored set")
     spec = parse_orbit(_declared(trajectory), trajectory.path, need_start=False)
     if fit:
         from truefall.validate.fit import fit_start
 
-        return fit_start(spec, trajectory), "fit"
+        fitted, openness = fit_start(spec, trajectory)
+        return Start(fitted, "fit", openness=openness)
     if spec.position is not None or spec.elements is not None:
-        return spec, "orbit file"
+        return Start(spec, "orbit file")
     if trajectory.velocity is None:
         raise InputError(
             "has no velocities, so its first row is no start; give an orbit file (--orbit) or "
@@ -55,16 +93,10 @@ def find_start(
         position=tuple(trajectory.position[0].tolist()),
         velocity=tuple(trajectory.velocity[0].tolist()),
     )
-    return first, "first row"
+    q = trajectory.quantisation
+    quantum = np.concatenate([np.atleast_2d(q.position)[0], np.atleast_2d(q.velocity)[0]])
+    return Start(first, "first row", quantum=quantum)
 
 
 def _declared(trajectory: Trajectory) -> dict[str, object]:
     return {k: v for k, v in trajectory.metadata.items() if k != "samples"}
-
-
-def quantum_of_start(trajectory: Trajectory, start_from: str) -> Floats:
-    """Half units of the last digits of the start, (6,); zeros unless it is the first row."""
-    if start_from != "first row":
-        return np.zeros(6)
-    q = trajectory.quantisation
-    return np.concatenate([np.atleast_2d(q.position)[0], np.atleast_2d(q.velocity)[0]])
