@@ -11,7 +11,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from truefall.validate.errors import InputError
-from truefall.validate.metadata_values import number, refuse_unknown, table, vector
+from truefall.validate.metadata_values import number, refuse_unknown, shown, table, vector
 from truefall.validate.sample_times import sample_times
 
 if TYPE_CHECKING:
@@ -104,7 +104,7 @@ def check_layer(mapping: Mapping[str, Any], where: str | Path) -> None:
             near = difflib.get_close_matches(str(mapping[key]), allowed, n=1, cutoff=0.5)
             hint = f"; did you mean {near[0]!r}?" if near else ""
             raise InputError(
-                f"{key} is {mapping[key]!r}; allowed are {', '.join(allowed)}{hint}", where
+                f"{key} is {shown(mapping[key])}; allowed are {', '.join(allowed)}{hint}", where
             )
     for key in ("start", "samples", "budget"):
         table(mapping.get(key, {}), key, where)
@@ -118,7 +118,7 @@ def check_layer(mapping: Mapping[str, Any], where: str | Path) -> None:
             vector(start[key], f"start.{key}", where)
     name = mapping.get("name", "orbit")
     if not isinstance(name, str) or not name or not name.isprintable():
-        raise InputError(f"name must be a line of text, not {name!r}", where)
+        raise InputError(f"name must be a line of text, not {shown(name)}", where)
 
 
 def _refuse_missing(mapping: Mapping[str, Any], where: str, need_start: bool) -> None:
@@ -179,6 +179,10 @@ def parse_orbit(
         raise InputError(
             "[samples] missing: give times, or first, last and count, or from_file", where
         )
+    if mapping.get("budget"):
+        from truefall.validate.budget import parse_budget
+
+        parse_budget(mapping["budget"], mapping["system"], where)
     times = None if samples is None else sample_times(table(samples, "samples", where), where)
     return OrbitSpec(
         name=mapping.get("name", Path(where).stem),

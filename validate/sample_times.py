@@ -8,7 +8,7 @@ from pathlib import Path
 from typing import Any
 
 from truefall.validate.errors import InputError
-from truefall.validate.metadata_values import number, refuse_unknown
+from truefall.validate.metadata_values import number, refuse_unknown, shown
 
 __all__ = ["check_times", "sample_times"]
 
@@ -73,7 +73,8 @@ def _regular_times(table: Mapping[str, Any], where: str) -> tuple[float, ...]:
     count = table["count"]
     if isinstance(count, bool) or not isinstance(count, int) or not 2 <= count <= _MOST_SAMPLES:
         raise InputError(
-            f"samples.count must be a whole number from 2 to {_MOST_SAMPLES}, not {count!r}", where
+            f"samples.count must be a whole number from 2 to {_MOST_SAMPLES}, not {shown(count)}",
+            where,
         )
     first = Fraction(number(table["first"], "samples.first", where))
     step = (Fraction(number(table["last"], "samples.last", where)) - first) / (count - 1)
@@ -89,7 +90,7 @@ def _times_file(name: Any, where: str) -> tuple[float, ...]:
     from truefall.validate.formats.files import check_readable
 
     if not isinstance(name, str):
-        raise InputError(f"samples.from_file must be a path, not {name!r}", where)
+        raise InputError(f"samples.from_file must be a path, not {shown(name)}", where)
     path = Path(where).parent / name
     check_readable(path)
     return tuple(read_times(path))

@@ -183,7 +183,7 @@ def _write(
     if kind == "hdf5":
         from truefall.validate.formats import hdf5_write
 
-        group, attributes = _group_name(metadata, path), flatten(metadata)
+        group, attributes = _group_name(metadata, path), flatten(_with_state(metadata, path))
         if group != metadata.get("name", group):
             attributes["name"] = metadata["name"]
         replace_file(
@@ -214,6 +214,18 @@ def _write(
             path, metadata, plain["position"], plain.get("velocity"), plain["time"], created
         )
     replace_file(path, lambda p: _put(p, data))
+
+
+def _with_state(metadata: Mapping[str, Any], path: Path) -> Mapping[str, Any]:
+    """Metadata whose start has position and velocity beside its elements, for other readers."""
+    from truefall.validate.orbit_file import parse_orbit
+
+    start = metadata.get("start", {})
+    if "semilatus_rectum" not in start:
+        return metadata
+    orbit = parse_orbit({k: v for k, v in metadata.items() if k != "samples"}, path).orbit()
+    state = {"position": list(orbit.position), "velocity": list(orbit.velocity)}
+    return {**metadata, "start": {**start, **state}}
 
 
 def _put(path: Path, data: bytes) -> None:
@@ -252,9 +264,11 @@ def write_states(
     InputError
         If the file cannot be written; nothing is left behind.
     """
-    start: dict[str, Any] = {"time": spec.start_time}
-    start["position"] = list(orbit.position)
-    start["velocity"] = list(orbit.velocity_used)
+    # the start as it was given: a light ray's direction or elements rounded to a position and a
+    # velocity would be another orbit, no longer exactly critical or circular
+    start: dict[str, Any] = {"time": spec.start_time, **(spec.elements or {})}
+    if spec.elements is None:
+        start |= {"position": list(orbit.position), "velocity": list(orbit.velocity)}
     metadata: dict[str, Any] = {
         "name": spec.name, "system": spec.system, "gm": spec.gm, "particle": spec.particle,
         "chart": spec.chart, "clock": spec.clock, "start": start,

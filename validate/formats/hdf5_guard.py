@@ -25,7 +25,8 @@ __all__ = ["GuardedFile"]
 _MAX_BYTES = 1 << 32
 _MAX_CHUNK = 64 << 20
 _MAX_CHUNKS = 1_000_000
-_MAX_ATTRIBUTE = 65_536
+_LONGEST_TEXT = 65_536
+_LONGEST_NUMBERS = 64
 _MAX_OBJECTS = 10_000
 _DEFLATE, _SHUFFLE, _FLETCHER32 = 1, 2, 3
 _FILTERS = {_SHUFFLE: "shuffle", _DEFLATE: "deflate", _FLETCHER32: "fletcher32"}
@@ -208,16 +209,17 @@ class GuardedFile:
     def _attribute(self, thing: Any, name: str) -> Any:
         h5t = self._h5py.h5t
         attribute = self._h5py.h5a.open(thing.id, name.encode())
-        kind = attribute.get_type()
+        kind, space = attribute.get_type(), attribute.get_space()
+        label = f"attribute {name!r} of {thing.name}"
         text = kind.get_class() == h5t.STRING
-        if attribute.get_storage_size() > _MAX_ATTRIBUTE or len(attribute.shape) > 1:
-            raise self._refuse(f"attribute {name!r} of {thing.name} is too large")
         if not text and kind.get_class() not in (h5t.FLOAT, h5t.INTEGER):
-            raise self._refuse(f"attribute {name!r} of {thing.name} is neither number nor text")
-        if text and attribute.shape not in ((), (1,)):
-            raise self._refuse(f"attribute {name!r} of {thing.name} is not one string")
-        if attribute.get_space().get_simple_extent_type() == self._h5py.h5s.NULL:
-            raise self._refuse(f"attribute {name!r} of {thing.name} is empty")
+            raise self._refuse(f"{label} is neither number nor text")
+        if space.get_simple_extent_type() == self._h5py.h5s.NULL:
+            raise self._refuse(f"{label} is empty")
+        if text and space.get_simple_extent_npoints() != 1:
+            raise self._refuse(f"{label} is not one string")
+        if attribute.get_storage_size() > (_LONGEST_TEXT if text else _LONGEST_NUMBERS):
+            raise self._refuse(f"{label} is too large")
         value: Any = np.asarray(thing.attrs[name])
         if not text:
             return value.tolist()

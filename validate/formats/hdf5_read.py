@@ -103,19 +103,28 @@ def read_all(path: str | Path) -> list[tuple[dict[str, Any], Trajectory]]:
         For files that cannot be opened, are damaged, or hold anything but plain numbers.
     """
     with GuardedFile(path) as file:
-        holder = file.group(file.root, "trajectory")
-        if holder is None:
-            raise InputError(
-                "has no group /trajectory; expected /trajectory/<name>/ with datasets time (n,), "
-                "position (n, 3), ...",
-                path,
-            )
-        found = []
-        for name in file.children(holder):
-            group = file.group(holder, name)
-            if group is None:
-                raise InputError(f"/trajectory/{name} is not a group", path)
-            found.append(_trajectory(file, group, name))
+        try:
+            found = _groups(file)
+        except (KeyError, OSError, RuntimeError, TypeError, ValueError) as error:
+            text = str(error).split("(")[-1].rstrip(")'")[:80]
+            raise InputError(f"is damaged ({text})", path) from None
     if not found:
         raise InputError("holds no trajectory", path)
+    return found
+
+
+def _groups(file: GuardedFile) -> list[tuple[dict[str, Any], Trajectory]]:
+    holder = file.group(file.root, "trajectory")
+    if holder is None:
+        raise InputError(
+            "has no group /trajectory; expected /trajectory/<name>/ with datasets time (n,), "
+            "position (n, 3), ...",
+            file.path,
+        )
+    found = []
+    for name in file.children(holder):
+        group = file.group(holder, name)
+        if group is None:
+            raise InputError(f"/trajectory/{name} is not a group", file.path)
+        found.append(_trajectory(file, group, name))
     return found

@@ -10,6 +10,7 @@ import numpy as np
 import numpy.typing as npt
 
 from truefall.validate.formats.hdf5_digest import content_digest
+from truefall.validate.trajectory import SERIES
 
 __all__ = ["FORMAT", "FORMAT_VERSION", "write"]
 
@@ -37,16 +38,17 @@ def _units(system: str) -> dict[str, str]:
     from truefall.reference.units import SYSTEM
 
     unit = SYSTEM[system]
+    plain = unit.length == "1"
     return {
         "position": unit.length,
-        "velocity": unit.speed,
+        "velocity": "1" if plain else f"{unit.length}/{unit.time}",
         "affine": unit.length,
         "time": unit.time,
         "proper_time": unit.time,
         "coordinate_time": unit.time,
         "energy": "1",
         "energy_minus_one": "1",
-        "angular_momentum": unit.momentum,
+        "angular_momentum": "1" if plain else f"{unit.length}2/{unit.time}",
         "periapsis": unit.length,
         "apoapsis": unit.length,
         "radial_period": unit.time,
@@ -69,7 +71,7 @@ def _long_name(name: str) -> str:
 
 
 def _attributes(group: Any, attributes: Mapping[str, Any]) -> None:
-    for key, value in attributes.items():
+    for key, value in sorted(attributes.items()):
         if isinstance(value, str):
             group.attrs[key] = _text(value)
         else:
@@ -100,9 +102,10 @@ def _series(group: Any, series: Mapping[str, Floats], units: Mapping[str, str]) 
     component.attrs["units"] = _text("1")
     component.attrs["long_name"] = _text("Cartesian component: 0 x, 1 y, 2 z")
     component.make_scale("component")
-    for name, values in series.items():
-        if name == "time":
+    for name in (base + suffix for base in SERIES[1:] for suffix in ("", "_low", "_bound")):
+        if name not in series:
             continue
+        values = series[name]
         dataset = _dataset(group, name, values, units[_base(name)])
         dataset.dims[0].attach_scale(time)
         if values.ndim == 2:
@@ -111,7 +114,7 @@ def _series(group: Any, series: Mapping[str, Floats], units: Mapping[str, str]) 
 
 def _invariants(group: Any, invariants: Mapping[str, Words], units: Mapping[str, str]) -> None:
     inner = group.create_group("invariants")
-    for name, words in invariants.items():
+    for name, words in sorted(invariants.items()):
         for suffix, value in zip(("", "_low", "_bound"), words, strict=True):
             if value is None:
                 continue

@@ -59,13 +59,19 @@ def flatten(metadata: Mapping[str, Any]) -> dict[str, Any]:
 
 
 def unflatten(attributes: Mapping[str, Any]) -> dict[str, Any]:
-    """The reverse of :func:`flatten`; ValueError if the budget is not TOML."""
+    """The reverse of :func:`flatten`; ValueError if the budget is not TOML.
+
+    Elements are the start as it was given; position and velocity beside them are their rounding,
+    written for readers that know no elements.
+    """
     found = dict(attributes)
     start = {
         key: found.pop(f"start_{key}")
         for key in ("time", "position", "velocity", *ELEMENT_KEYS)
         if f"start_{key}" in found
     }
+    if any(key in start for key in ELEMENT_KEYS):
+        start = {k: v for k, v in start.items() if k not in ("position", "velocity")}
     if start:
         found["start"] = start
     if "budget" in found:

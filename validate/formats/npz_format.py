@@ -50,7 +50,7 @@ def _load(archive: zipfile.ZipFile, info: zipfile.ZipInfo, path: Path) -> npt.ND
         if dtype.hasobject:
             raise InputError(f"array {name!r} holds Python objects; save plain numbers", path)
         size = prod(shape) * dtype.itemsize
-        if stream.tell() + size != info.file_size:
+        if any(extent < 0 for extent in shape) or stream.tell() + size != info.file_size:
             raise InputError(f"array {name!r} is not as long as its header says", path)
         if dtype.kind not in "fiuSU":
             raise InputError(f"array {name!r} has type {dtype}; expected float64", path)

@@ -7,8 +7,8 @@ inferred from its labels, and its comments are for people.  The agreement:
 - kilometres and kilometres per second: the "astronomical" system.  A trajectory in SI is
   divided by 1000 on writing, rounded once, and comes back as "astronomical".
 - ``time`` is the number of seconds since 2000-01-01T00:00:00 of the message's own time scale,
-  every day of 86400 s; written with all decimals of the shortest form, so stamps come back
-  exactly.
+  every day of 86400 s; written with all decimals of the shortest form and never less than 15,
+  so that stamps come back exactly and a reader sees that they were not cut.
 - The standard allows 16 digits, which do not hold every float64: numbers are written with 16,
   correctly rounded, and a reader counts half a unit of the last as quantisation.
 """
@@ -34,6 +34,7 @@ __all__ = ["read", "text"]
 
 _LIMIT = 1 << 30
 _LINE = 254
+_STAMP_DECIMALS = 15
 _ZERO = datetime.datetime(2000, 1, 1)
 _DAY = 86400
 _EPOCH = re.compile(
@@ -62,6 +63,8 @@ def _seconds(stamp: str, line: int, path: Path) -> str:
     try:
         if match[4]:
             day = datetime.datetime.strptime(f"{match[1]} {match[4]}", "%Y %j")
+            if day.year != int(match[1]):
+                raise ValueError("that year has 365 days")
         else:
             day = datetime.datetime(int(match[1]), int(match[2]), int(match[3]))
         datetime.time(hour, minute, second)
@@ -141,9 +144,10 @@ def read(path: str | Path) -> tuple[dict[str, Any], Trajectory]:
         raise InputError("holds no ephemeris lines", path)
     texts = {name: [row[k] for row in rows] for k, name in enumerate(_COLUMNS)}
     values = {name: np.array(list(map(float, column))) for name, column in texts.items()}
+    quanta = file_quanta(texts, values, fixed=frozenset({"time"}))  # epochs have decimals only
     metadata = {"system": "astronomical"}
     return metadata, make_trajectory(
-        path, path.stem, arrays_of(values), arrays_of(file_quanta(texts, values)), metadata
+        path, path.stem, arrays_of(values), arrays_of(quanta), metadata
     )
 
 
@@ -159,7 +163,7 @@ def _stamp(time: float, path: Path) -> str:
         raise InputError(
             f"time {time!r} s lies outside the years 1 to 9999 of an OEM", path
         ) from None
-    decimals = f"{fraction:f}".partition(".")[2].rstrip("0") or "0"
+    decimals = f"{fraction:f}".partition(".")[2].rstrip("0").ljust(_STAMP_DECIMALS, "0")
     stamp = f"{moment.isoformat(timespec='seconds')}.{decimals}"
     if len(stamp) > _LINE // 2:
         raise InputError(

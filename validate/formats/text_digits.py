@@ -92,7 +92,7 @@ def _exact_stamps(texts: Sequence[str], values: Floats) -> bool:
     return len(texts) > _LONG_GRID or len(_significant(str(steps.pop()))) <= _SHORT_STEP_DIGITS
 
 
-def _half_units(texts: Sequence[str], values: Floats) -> Floats:
+def _half_units(texts: Sequence[str], values: Floats, fixed: bool) -> Floats:
     """Half a unit of the last digit of every entry, by the column's digits or decimals."""
     decimals: list[int] = []
     digits: list[int] = []
@@ -110,14 +110,17 @@ def _half_units(texts: Sequence[str], values: Floats) -> Floats:
     most_digits = max(digits[k] for k in nonzero)
     full_decimals = sum(decimals[k] == most_decimals for k in nonzero)
     full_digits = sum(digits[k] == most_digits for k in nonzero)
-    if full_decimals > full_digits or (full_decimals == full_digits and not scientific):
+    if fixed or full_decimals > full_digits or (full_decimals == full_digits and not scientific):
         return np.full(values.size, 0.5 * 10.0**-most_decimals)
     quanta: Floats = 0.5 * 10.0 ** (np.array(leading, dtype=np.float64) - (most_digits - 1))
     return np.where(values == 0.0, 0.0, quanta)  # significant digits round no number to zero
 
 
 def file_quanta(
-    texts: Mapping[str, Sequence[str]], values: Mapping[str, Floats]
+    texts: Mapping[str, Sequence[str]],
+    values: Mapping[str, Floats],
+    *,
+    fixed: frozenset[str] = frozenset(),
 ) -> dict[str, Floats]:
     """Half a unit of the last digit of every entry of every column; zeros where exact.
 
@@ -126,6 +129,8 @@ def file_quanta(
     texts : mapping of column name to n texts
         Each matches :data:`NUMBER`.
     values : mapping of column name to (n,) float64
+    fixed : set of str
+        Columns known to be fixed-point.
 
     Returns
     -------
@@ -155,6 +160,6 @@ def file_quanta(
     return {
         name: np.zeros(values[name].size)
         if exact(name, column)
-        else _half_units(column, values[name])
+        else _half_units(column, values[name], name in fixed)
         for name, column in texts.items()
     }
