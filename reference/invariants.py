@@ -114,6 +114,12 @@ def state_invariants(
         root = np.sqrt(1.0 + dq)
         # (1 + de)/root - 1 = (de - (root - 1))/root, with root - 1 = dq/(1 + root)
         excess = (de - dq / (1.0 + root)) / root
+        if chart == "eddington-finkelstein":
+            # there dr/dT, far larger than E - 1 in weak fields, stands in both terms:
+            # -rdot + 2 rdot/(1 + root) = -rdot dq/(1 + root)^2
+            m = 2.0 / r
+            near = (m + tangential2) / (1.0 + root) - m
+            excess = (near - rdot * dq / (1.0 + root) ** 2) / root
         return Invariants(
             energy=1.0 + excess,
             energy_minus_one=excess,
