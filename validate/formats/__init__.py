@@ -184,7 +184,7 @@ def _write(
         from truefall.validate.formats import hdf5_write
 
         group, attributes = _group_name(metadata, path), flatten(_with_state(metadata, path))
-        if group != metadata.get("name", group):
+        if group != metadata.get("name", group) and str(metadata["name"]).isascii():
             attributes["name"] = metadata["name"]
         replace_file(
             path,
