@@ -86,7 +86,8 @@ def invariants(orbit: dict[str, Any], digits: int) -> tuple[Any, Any, Any, bool,
     energy, cross = g.invariants()
     momentum = mpmath.sqrt(sum(q * q for q in cross))
     x_dot = [c[1] for c in g.expand(g.start)[0]]
-    outward = sum(a * b for a, b in zip(g.start.x, x_dot, strict=True)) > 0
+    # at rest the sum is rounding noise
+    outward = sum(a * b for a, b in zip(g.start.x, x_dot, strict=True)) > mpmath.mpf(10) ** -20
     radius = geodesic.metrics.areal_radius(orbit["chart"], g.rho)
     return energy, momentum, radius, bool(outward), g.arithmetic.number(g.length)
 
