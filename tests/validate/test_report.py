@@ -280,9 +280,9 @@ def test_pictures_are_the_same_every_time(trajectory_of: Make, tmp_path: Path) -
 def test_equal_names_get_files_of_their_own(trajectory_of: Make, tmp_path: Path) -> None:
     """Two trajectories called alike do not overwrite each other."""
     result = check_trajectory(_changed(trajectory_of))
-    write_report([result, result], tmp_path)
+    write_report([result, result, result], tmp_path)
 
-    assert {p.name for p in tmp_path.glob("*.png")} == {"run.png", "run-2.png"}
+    assert {p.name for p in tmp_path.glob("*.png")} == {"run.png", "run-2.png", "run-3.png"}
 
 
 def test_a_folder_that_cannot_be_written(trajectory_of: Make, tmp_path: Path) -> None:

@@ -15,6 +15,11 @@ if TYPE_CHECKING:
 __all__ = ["write_report"]
 
 
+def _numbered(base: str, count: int) -> list[str]:
+    """``base``, ``base-2``, ... enough for ``count`` others to be taken."""
+    return [base, *(f"{base}-{k}" for k in range(2, count + 2))]
+
+
 def write_report(results: Sequence[CheckResult], directory: str | Path) -> list[Path]:
     """Write ``report.txt``, ``report.json`` and a picture for each trajectory.
 
@@ -37,9 +42,8 @@ def write_report(results: Sequence[CheckResult], directory: str | Path) -> list[
         written[1].write_text(text + "\n", encoding="utf-8")
         used: set[str] = set()
         for result in results:
-            stem = re.sub(r"[^A-Za-z0-9_-]+", "-", result.name).strip("-") or "trajectory"
-            while stem in used:
-                stem += "-2"
+            base = re.sub(r"[^A-Za-z0-9_-]+", "-", result.name).strip("-") or "trajectory"
+            stem = next(s for s in _numbered(base, len(results)) if s not in used)
             used.add(stem)
             written += write_figures(result, folder, stem)
     except OSError as error:
