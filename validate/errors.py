@@ -7,6 +7,15 @@ from pathlib import Path
 __all__ = ["InputError", "UsageError"]
 
 
+_LONGEST = 600
+
+
+def _one_line(message: str) -> str:
+    """A sentence that quotes a stranger's file, safe to print: one line, no control characters."""
+    plain = "".join(c if c.isprintable() else " " for c in message)
+    return plain if len(plain) <= _LONGEST else plain[: _LONGEST - 4] + " ..."
+
+
 class InputError(Exception):
     """An input (orbit file, sidecar, times file, trajectory) cannot be used: exit status 4.
 
@@ -22,6 +31,7 @@ class InputError(Exception):
 
     def __init__(self, message: str, where: str | Path | None = None) -> None:
         self.where = None if where is None else str(where)
+        message = _one_line(message)
         super().__init__(message if where is None else f"{where}: {message}")
 
 

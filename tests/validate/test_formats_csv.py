@@ -140,6 +140,15 @@ def test_what_is_no_file(tmp_path: Path, kind: str) -> None:
         read_trajectories(path)
 
 
+def test_sentences_are_safe_to_print() -> None:
+    """Whatever a file holds, its refusal is one line without control characters."""
+    error = InputError("bad\x1b[31m name\nsecond " + "x" * 5000, "run.csv")
+
+    assert str(error).isprintable()
+    assert str(error).startswith("run.csv: bad [31m name second x")
+    assert len(str(error)) < 700
+
+
 def test_precedence_option_orbit_file_sidecar(tmp_path: Path) -> None:
     """Option before --orbit before the file before the sidecar, key by key."""
     path = _put(tmp_path, '# chart = "areal"\n# budget.position = 2.0\n' + ROWS)

@@ -81,7 +81,7 @@ def read(path: str | Path) -> tuple[dict[str, Any], Trajectory]:
     arrow = _pyarrow(path)
     try:
         stored, raw = _read_columns(arrow, path)
-    except (OSError, arrow.ArrowException) as error:
+    except (OSError, ValueError, arrow.ArrowException) as error:
         text = (str(error).splitlines() or ["damaged"])[0][:120]
         raise InputError(f"is not a readable Parquet file ({text})", path) from None
     if len(raw) > _MAX_METADATA:
