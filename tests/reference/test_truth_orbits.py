@@ -43,7 +43,7 @@ def _engine(entry):
 
 @pytest.mark.parametrize("entry", ORBITS, ids=lambda entry: entry["name"])
 def test_states(entry):
-    """1e-32 of each vector's size for both words, 1 ulp for the high word, and the proven bound."""
+    """1e-32 of each vector's size for both words, the nearest float64, and the proven bound."""
     count = USABLE.get(entry["name"], len(entry["times"]))
     states = _engine(entry).at(entry["times"][:count])
     with mpmath.workdps(45):
