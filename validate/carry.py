@@ -9,7 +9,8 @@ exponentially, instead of overflowing, and stays visible however small the half 
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
-from typing import TYPE_CHECKING
+from functools import lru_cache
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
@@ -24,6 +25,7 @@ __all__ = [
     "Spread",
     "carried_spread",
     "end_spread",
+    "exact_orbit",
     "fitted_spread",
     "move_start",
     "second_clock",
@@ -78,6 +80,39 @@ def _difference(a: States, b: States) -> tuple[Floats, Floats, Floats]:
     )
 
 
+@lru_cache(maxsize=24)
+def _built(*start: Any) -> Orbit:
+    """An orbit by all that defines it; building one costs far more than a few of its states."""
+    from truefall.reference import Orbit
+
+    system, gm, particle, chart, clock, time, position, velocity = start
+    return Orbit(
+        system=system, gm=gm, particle=particle, chart=chart, clock=clock, start_time=time,
+        position=position, velocity=velocity,
+    )  # fmt: skip
+
+
+def exact_orbit(spec: OrbitSpec) -> Orbit:
+    """``spec.orbit()``, remembered for the starts that a fit and its spread come back to.
+
+    Raises
+    ------
+    InputError
+        If the start is no orbit.
+    """
+    from truefall.reference import StartError
+
+    if spec.elements is not None or spec.position is None or spec.velocity is None:
+        return spec.orbit()
+    try:
+        return _built(
+            spec.system, spec.gm, spec.particle, spec.chart, spec.clock, spec.start_time,
+            spec.position, spec.velocity,
+        )  # fmt: skip
+    except StartError:
+        return spec.orbit()  # which words the refusal
+
+
 def move_start(spec: OrbitSpec, orbit: Orbit, component: int, step: float) -> tuple[Orbit, float]:
     """The orbit whose start differs in one of six components, and by how much exactly.
 
@@ -91,7 +126,7 @@ def move_start(spec: OrbitSpec, orbit: Orbit, component: int, step: float) -> tu
     before = vector[component % 3]
     vector[component % 3] = before + step
     moved = replace(spec, position=tuple(start[0]), velocity=tuple(start[1]), elements=None)
-    return moved.orbit(), vector[component % 3] - before
+    return exact_orbit(moved), vector[component % 3] - before
 
 
 def sensitivities(spec: OrbitSpec, orbit: Orbit, times: Floats) -> Floats:

@@ -12,7 +12,7 @@ import numpy.typing as npt
 
 from truefall.validate.against import load_stored, stored_expected
 from truefall.validate.budget import Judgement, overall, parse_budget
-from truefall.validate.carry import end_spread, second_clock, stamp_spread
+from truefall.validate.carry import end_spread, exact_orbit, second_clock, stamp_spread
 from truefall.validate.compare import Comparison, Expected, compare
 from truefall.validate.drift import drifts_of
 from truefall.validate.errors import InputError, UsageError
@@ -199,7 +199,7 @@ def check_trajectory(
     start = find_start(trajectory, fit=fit, stored=stored)
     spec = start.spec
     budget = parse_budget(trajectory.metadata.get("budget", {}), spec.system, trajectory.path)
-    orbit = spec.orbit()
+    orbit = exact_orbit(spec)
     inside = orbit.reachable(trajectory.time)
     beyond, past = _beyond(spec, orbit, trajectory, inside, start.half_units)
     result = CheckResult(

@@ -15,7 +15,7 @@ import numpy as np
 import numpy.typing as npt
 
 from truefall.reference.states import EndReached
-from truefall.validate.carry import sensitivities, stamp_spread
+from truefall.validate.carry import exact_orbit, sensitivities, stamp_spread
 from truefall.validate.errors import InputError
 from truefall.validate.guess import kepler_guesses, polynomial_guesses
 
@@ -49,7 +49,7 @@ _ROUNDING = 1e-14
 
 def _residual(spec: OrbitSpec, times: Floats, position: Floats) -> Floats | None:
     try:
-        orbit = spec.orbit()
+        orbit = exact_orbit(spec)
         states = orbit.at(times)
     except (InputError, EndReached):
         return None
@@ -99,7 +99,7 @@ def _refine(
 def _step(spec: OrbitSpec, start: Floats, times: Floats, residual: Floats, size: Floats) -> Floats:
     """The Gauss-Newton step, in units of ``size``."""
     here = _moved(spec, start)
-    columns = sensitivities(here, here.orbit(), times)[:, :3].reshape(-1, 6) * size
+    columns = sensitivities(here, exact_orbit(here), times)[:, :3].reshape(-1, 6) * size
     known = np.isfinite(columns).all(axis=1)  # a moved start may plunge before the last row
     cut = _cut(spec)
     return np.asarray(
@@ -126,7 +126,7 @@ def _openness(spec: OrbitSpec, trajectory: Trajectory, rows: npt.NDArray[np.intp
     quantum = trajectory.quantisation
     units = np.broadcast_to(quantum.position, trajectory.position.shape)[rows]
     times = trajectory.time[rows]
-    orbit = spec.orbit()
+    orbit = exact_orbit(spec)
     units = units + stamp_spread(orbit, times, quantum.time).position[:, None]
     start = np.array([*orbit.position, *orbit.velocity])
     rounding = np.diag(np.spacing(np.abs(start)) / 2)
