@@ -131,5 +131,7 @@ def replaced(table: Expected, rows: npt.NDArray[np.int64], exact: Expected) -> E
         for series in ("position", "velocity", "clock")
         for kind in ("", "_low", "_bound")
     ]
-    changes: dict[str, Any] = {name: put(getattr(table, name), getattr(exact, name)) for name in names}
+    changes: dict[str, Any] = {
+        name: put(getattr(table, name), getattr(exact, name)) for name in names
+    }
     return replace(table, **changes)
