@@ -348,46 +348,19 @@ class Orbit:
         return self._pack(stamps, self._enclosure.samples(self._engine_clock, elapsed, digits))
 
     # -- for the table ---------------------------------------------------------------------------
-    def planar(self, elapsed: Floats) -> Floats:
-        """Planar position and velocity and the second clock at elapsed times, as two words.
+    @property
+    def enclosure(self) -> Enclosure:
+        """The solutions behind this orbit, for modules that need more than rounded states."""
+        return self._enclosure
 
-        Returns
-        -------
-        (n, 5, 2)
-            Along the start's radius and across it; the clock of :class:`States` (proper time,
-            affine parameter, or chart time on the proper clock).
-        """
-        exact = [rational(Fraction(float(t)) / self._time) for t in elapsed]
-        clock = "chart" if self.clock == "proper" else "tau"
-        return self._enclosure.planar(self._engine_clock, clock, exact)
+    def engine_times(self, elapsed: Floats) -> list[fmpq]:
+        """Elapsed times, float64 in the system's unit, as exact multiples of GM/c^3."""
+        return [rational(Fraction(float(t)) / self._time) for t in elapsed]
 
-    def planar_azimuth(self, elapsed: Floats) -> Floats:
-        """Azimuth since the start at elapsed times, (n,), radians."""
-        exact = [rational(Fraction(float(t)) / self._time) for t in elapsed]
-        return np.array(self._enclosure.azimuths(self._engine_clock, exact))
-
-    def reduction(self) -> tuple[float, float, Floats, Floats] | None:
-        """One radial period in elapsed time and what it adds, each as two words; None if none.
-
-        Returns
-        -------
-        low, high : float
-            The period that holds the start.
-        period : (4,)
-            Its length and the second clock's advance.
-        turn : (2,)
-            The azimuth it adds, modulo 2 pi.
-        """
-        clock = "chart" if self.clock == "proper" else "tau"
-        found = self._enclosure.reduction(self._engine_clock, clock)
-        if found is None:
-            return None
-        low, words, turn = found
-        return low, low + words[0], words, turn
-
-    def plane(self) -> tuple[Floats, Floats]:
-        """Unit vectors of the start's radius and across it, (3, 2), as two words."""
-        return self._enclosure.plane()
+    @property
+    def engine_clocks(self) -> tuple[str, str]:
+        """Names of the clock that times are on, and of the second one, inside the engine."""
+        return self._engine_clock, "chart" if self.clock == "proper" else "tau"
 
     def _pack(self, stamps: Floats, samples: list[Sample]) -> States:
         n = len(samples)

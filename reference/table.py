@@ -14,6 +14,8 @@ from typing import TYPE_CHECKING
 import numpy as np
 import numpy.typing as npt
 
+from truefall.reference.table_source import planar, reduction
+
 if TYPE_CHECKING:
     from truefall.reference.orbit import Orbit
 
@@ -109,7 +111,7 @@ class _Fitter:
         if half < 2**20 * np.spacing(max(abs(low), abs(high))):
             raise ArithmeticError("the table does not reach the accuracy of float64")
         places = centre + half * np.concatenate([[0.0], self.nodes, self.checks])
-        words = self.orbit.planar(places)  # (m, 5, 2): two words each
+        words = planar(self.orbit, places)  # (m, 5, 2): two words each
         base = words[0, :, 0]
         # differences from the central value keep the fit's rounding far below the value's ulp
         change = (words[:, :, 0] - base) + words[:, :, 1]
@@ -165,7 +167,7 @@ def build_table(orbit: Orbit, first: float, last: float) -> Table:
         If the fit does not reach float64 accuracy with a reasonable number of pieces.
     """
     fitter = _Fitter(orbit)
-    cycle = orbit.reduction()
+    cycle = reduction(orbit)
     if cycle is None:
         low, high = first - orbit.start_time, last - orbit.start_time
         widen = 1e-9 * max(high - low, abs(low), abs(high)) if high == low else 0.0
@@ -189,7 +191,7 @@ def build_table(orbit: Orbit, first: float, last: float) -> Table:
         waiting += [(middle, b), (a, middle)]
         if len(done) + len(waiting) > _MAX_INTERVALS or not a < middle < b:
             raise ArithmeticError("the table does not reach the accuracy of float64")
-    frame, frame_low = orbit.plane()
+    frame, frame_low = orbit.enclosure.plane()
     edges = np.array([a for a, _, _ in done] + [done[-1][1]])
     return Table(
         start=orbit.start_time,

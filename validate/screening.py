@@ -71,7 +71,9 @@ def _azimuth(orbit: Orbit, table: Table, times: Floats) -> Floats:
     Linear between exact values at the table's edges, which are a third of a radian apart at
     most.
     """
-    at_edges = orbit.planar_azimuth(table.edges)
+    from truefall.reference.table_source import azimuths
+
+    at_edges = azimuths(orbit, table.edges)
     elapsed = times - orbit.start_time
     length = float(table.period[0])
     if length == 0.0:
@@ -79,9 +81,7 @@ def _azimuth(orbit: Orbit, table: Table, times: Floats) -> Floats:
     swept = orbit.azimuth_per_radial_period
     assert swept is not None
     turns = np.floor((elapsed - table.edges[0]) / length)
-    total: Floats = turns * swept.value + np.interp(
-        elapsed - turns * length, table.edges, at_edges
-    )
+    total: Floats = turns * swept.value + np.interp(elapsed - turns * length, table.edges, at_edges)
     return total
 
 

@@ -149,14 +149,19 @@ class Disc:
 
     def __add__(self, other: Disc) -> Disc:
         radius = min(self.radius, other.radius)
-        sup = float(np.logaddexp2(self.sup, other.sup)) + SLACK
+        sup = float(np.logaddexp2(self._sup_on(radius), other._sup_on(radius))) + SLACK
         order = min(self.order, other.order)
         return Disc.build(self.series + other.series, order, radius, sup)
 
     def __mul__(self, other: Disc) -> Disc:
         radius = min(self.radius, other.radius)
         order = min(self.order, other.order)
-        return Disc.build(self.series * other.series, order, radius, self.sup + other.sup + SLACK)
+        sup = self._sup_on(radius) + other._sup_on(radius) + SLACK
+        return Disc.build(self.series * other.series, order, radius, sup)
+
+    def _sup_on(self, radius: float) -> float:
+        """The bound on a smaller disc: from the coefficients where that pays."""
+        return self.sup if self.radius - radius < 0.5 else self.bound(radius)
 
     def scaled(self, factor: arb, offset: arb | int = 0) -> Disc:
         """``factor * f + offset``."""

@@ -16,6 +16,7 @@ from flint import arb
 from truefall.reference.exact.approach import Approach
 from truefall.reference.exact.centre import Centre
 from truefall.reference.exact.disc import TooSmall
+from truefall.reference.exact.fall import Fall
 from truefall.reference.exact.field import to_ball
 from truefall.reference.exact.flow import CLOCKS, Flow
 from truefall.reference.exact.infinity import Infinity
@@ -23,9 +24,9 @@ from truefall.reference.exact.segment import NotCovered, Point, Taylor
 
 __all__ = ["BeyondEnd", "Leg", "LegEnd", "Place"]
 
-Piece: TypeAlias = "Taylor | Approach | Centre"
+Piece: TypeAlias = "Taylor | Approach | Centre | Fall"
 
-_MAX_PIECES = 40_000
+_MAX_PIECES = 20_000
 #: Share of a piece's half-width at which the next one takes over.
 _HANDOVER = 0.96875
 _HALVINGS = 60
@@ -104,6 +105,7 @@ class Leg:
         # w >= 0 along the leg: the forms that pass the future horizon.
         self.regular = delta * direction > 0
         self.closed = False
+        self.fall_step = 0.05
         self.final = self._final_piece(end_u)
         self.joints: list[_Joint] = []
         self.rights: dict[str, list[arb]] = {name: [] for name in CLOCKS}
@@ -170,7 +172,7 @@ class Leg:
         end tells whether the stretch up to there is monotone.
         """
         if not isinstance(piece, Taylor):
-            return arb(piece.h)
+            return arb(_HANDOVER * piece.h)
         last = _HANDOVER * piece.h
         for _ in range(_HALVINGS):
             if piece.v_at(arb(last)) * self.direction > 0:
@@ -186,15 +188,21 @@ class Leg:
             raise ArithmeticError("the leg needs more pieces than allowed")
         joint = self.joints[-1]
         piece = joint.piece
-        if not isinstance(piece, Taylor):
-            raise TypeError("only a final piece can be other than a power series")
+        if isinstance(piece, Approach | Centre):
+            raise TypeError("nothing follows a final piece")
         x_end = joint.last
         u_join = piece.point(x_end).u.mid()
-        x_join = piece.find_u(u_join, guess=x_end)
+        x_join = (
+            piece.find_u(u_join, guess=x_end) if isinstance(piece, Taylor) else piece.find_u(u_join)
+        )
         y = joint.y + piece.point(x_join).y
         clocks = {name: joint.clocks[name] + piece.clock(name, x_join) for name in CLOCKS}
         if self._join_final(u_join, y, clocks):
             return True
+        if self.end is LegEnd.CENTRE and u_join > 0.55:
+            return self._fall_on(u_join, y, clocks)
+        if isinstance(piece, Fall):
+            raise TypeError("a fall leads to the centre")
         for share in _TRIES:
             centre = self._ahead(piece, u_join, share)
             if centre is None:
@@ -208,6 +216,20 @@ class Leg:
                 self._push(follower, at, y, clocks)
             except (NotCovered, TooSmall):
                 continue
+            return True
+        raise NotCovered("no further piece could be placed")
+
+    def _fall_on(self, u_join: arb, y: arb, clocks: dict[str, arb]) -> bool:
+        """Add a piece below the horizon, centred as far ahead as it still reaches back."""
+        z_join = 1 / u_join.sqrt()
+        for share in _TRIES:
+            centre = (z_join * (1 - share * self.fall_step)).mid()
+            try:
+                follower = Fall(self.flow, centre)
+                self._push(follower, follower.find_u(u_join), y, clocks)
+            except (NotCovered, TooSmall):
+                continue
+            self.fall_step = follower.h
             return True
         raise NotCovered("no further piece could be placed")
 
@@ -315,7 +337,7 @@ class Leg:
             self.extend()
         index = len(self.joints) - 1
         piece = self.joints[index].piece
-        if isinstance(piece, Centre):
+        if isinstance(piece, Centre | Fall):
             return self.place(index, piece.find_u(u0))
         circle = flow.motion.double_root
         if isinstance(piece, Approach):

@@ -119,13 +119,17 @@ def _neighbours(flow: Flow, roots: list[arb]) -> tuple[arb | None, arb | None]:
         if flow.slope(u0) > 0:
             return u0, (others[k + 1] if k + 1 < len(others) else None)
         return (others[k - 1] if k else None), u0
+    hits = [r for r in roots if r.overlaps(u0)]
+    slope = flow.slope(u0)
+    if len(hits) > 1 or (hits and slope.contains(0)):
+        raise MoreBits("the start is not told from a turning point")
     for root in roots:
-        if root < u0:
+        # the potential is positive at the start: its slope says on which side a root so close lies
+        below = root < u0 or (root.overlaps(u0) and slope > 0)
+        if below:
             lower = root
-        elif root > u0:
-            upper = root if upper is None else upper
-        else:
-            raise MoreBits("the start is not told from a turning point")
+        elif upper is None:
+            upper = root
     return lower, upper
 
 
