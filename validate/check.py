@@ -17,7 +17,14 @@ from truefall.validate.compare import Comparison, Expected, compare
 from truefall.validate.drift import drifts_of
 from truefall.validate.errors import InputError, UsageError
 from truefall.validate.growth import Growth, growth_of
-from truefall.validate.judging import Floor, floor_of, judgements_of, position_tolerance
+from truefall.validate.judging import (
+    Floor,
+    floor_of,
+    judgements_of,
+    margins_of,
+    position_tolerance,
+)
+from truefall.validate.screening import MANY_ROWS, decisive_rows, replaced, tabled_expected
 from truefall.validate.starts import Start, find_start
 
 if TYPE_CHECKING:
@@ -39,7 +46,8 @@ class CheckResult:
 
     ``verdict`` is pass, fail, undecided, not-judged or unusable; ``reason`` is the sentence
     for a verdict that no tolerance explains.  ``trajectory`` holds the rows that were compared
-    (those the orbit reaches), of ``samples`` in the file; ``tolerances`` are the budget's.
+    (those the orbit reaches), of ``samples`` in the file; ``tolerances`` are the budget's;
+    ``certified`` of the rows were held against enclosed values, the others against the table.
     """
 
     file: str
@@ -55,6 +63,7 @@ class CheckResult:
     floor: Floor | None = None
     growth: Growth | None = None
     samples: int = 0
+    certified: int = 0
     tolerances: Mapping[str, float] = field(default_factory=dict)
     start_from: str = ""
     reference: str = "exact"
@@ -210,10 +219,17 @@ def check_trajectory(
     if not inside.any():
         return result
     kept = _part(trajectory, inside)
-    if stored is None:
-        expected = _expected(orbit, kept.time)
-    else:
+    certified = len(kept)
+    if stored is not None:
         expected = stored_expected(stored, orbit, inside, bool(budget.per_revolution))
+        certified = 0
+    elif len(kept) >= MANY_ROWS and (table := tabled_expected(orbit, kept.time)) is not None:
+        rough = _compare(kept, start, orbit, table)
+        rows = decisive_rows(rough, margins_of(rough, budget))
+        expected = replaced(table, rows, _expected(orbit, kept.time[rows]))
+        certified = rows.size
+    else:
+        expected = _expected(orbit, kept.time)
     comparison = _compare(kept, start, orbit, expected)
     radius = _areal_radius(spec, expected)
     floor, judged = floor_of(comparison, position_tolerance(comparison, budget, radius))
@@ -226,6 +242,7 @@ def check_trajectory(
         verdict=verdict,
         reason=reason,
         trajectory=kept,
+        certified=certified,
         expected=expected,
         comparison=comparison,
         judgements=tuple(judgements),

@@ -13,7 +13,7 @@ from truefall.validate.compare import Comparison, Guard
 from truefall.validate.drift import Drift
 from truefall.validate.errors import InputError
 
-__all__ = ["Floor", "floor_of", "judgements_of", "position_tolerance"]
+__all__ = ["Floor", "floor_of", "judgements_of", "margins_of", "position_tolerance"]
 
 Floats = npt.NDArray[np.float64]
 _DEFAULT_SHARE = 0.01  # of r, for predictable_until without a position budget
@@ -125,6 +125,20 @@ def judgements_of(
         limit = tolerance * np.maximum(comparison.revolutions, 1.0)
         judgement = _one(comparison, quantity, limit, series, judged, where, light)
         found.append(replace(judgement, quantity=f"per_revolution.{quantity}"))
+    return found
+
+
+def margins_of(comparison: Comparison, budget: Budget) -> list[tuple[Floats, Floats]]:
+    """Distance from each tolerance that the file has columns for, and the guard, (n,) each."""
+    series = _series(comparison)
+    growing = np.maximum(comparison.revolutions, 1.0)
+    limits = [(q, np.full(growing.size, t)) for q, t in budget.absolute.items()]
+    limits += [(q, t * growing) for q, t in budget.per_revolution.items()]
+    found = []
+    for quantity, limit in limits:
+        pair = series[quantity]
+        if pair is not None:
+            found.append((limit - pair[0], pair[1].total))
     return found
 
 

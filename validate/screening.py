@@ -20,7 +20,6 @@ from truefall.validate.compare import Comparison, Expected
 if TYPE_CHECKING:
     from truefall.reference import Orbit
     from truefall.reference.table import Table
-    from truefall.validate.budget import Judgement
 
 __all__ = ["MANY_ROWS", "decisive_rows", "replaced", "tabled_expected"]
 
@@ -86,34 +85,30 @@ def _azimuth(orbit: Orbit, table: Table, times: Floats) -> Floats:
 
 
 def decisive_rows(
-    comparison: Comparison, judgements: Sequence[Judgement], limits: Sequence[tuple[Floats, Floats]]
+    comparison: Comparison, margins: Sequence[tuple[Floats, Floats]]
 ) -> npt.NDArray[np.int64]:
-    """Rows to be computed exactly.
+    """Rows to be computed exactly: the largest errors, what is undecided, and random ones.
 
     Parameters
     ----------
     comparison : Comparison
-    judgements : sequence of Judgement
-        Their rows, where margins are smallest, are among the result.
-    limits : sequence of (margin, guard) arrays
-        Rows whose distance from their tolerance is within the guard are among the result, the
-        closest first, a few thousand at most.
+        Against the table.
+    margins : sequence of (margin, guard) arrays
+        Of each tolerance, (n,) each.  The rows closest to it, and those that the guard leaves
+        undecided (a few thousand at most), are among the result.
     """
     n = comparison.time.size
     rng = np.random.default_rng(n)
-    rows = [rng.integers(0, n, _RANDOM), [0, n - 1, int(np.argmax(comparison.distance))]]
-    for series in (comparison.radial, comparison.along, comparison.cross):
-        rows.append([int(np.argmax(np.abs(series)))])
-    for error in (comparison.velocity_error, comparison.clock_error):
-        if error is not None:
-            rows.append([int(np.argmax(np.abs(error)))])
-    rows.append([j.row for j in judgements])
-    for margin, guard in limits:
+    errors = [comparison.distance, comparison.radial, comparison.along, comparison.cross]
+    errors += [e for e in (comparison.velocity_error, comparison.clock_error) if e is not None]
+    rows = [rng.integers(0, n, _RANDOM), np.array([0, n - 1])]
+    rows += [np.array([int(np.argmax(np.abs(e)))]) for e in errors]
+    for margin, guard in margins:
         open_ = np.flatnonzero(np.abs(margin) <= guard)
         if open_.size > _MOST_EXACT:
             open_ = open_[np.argsort(np.abs(margin[open_]))[:_MOST_EXACT]]
-        rows.append(open_)
-    return np.unique(np.concatenate([np.asarray(r, dtype=np.int64) for r in rows]))
+        rows += [open_, np.array([int(np.argmin(margin)), int(np.argmin(np.abs(margin)))])]
+    return np.unique(np.concatenate(rows).astype(np.int64))
 
 
 def replaced(table: Expected, rows: npt.NDArray[np.int64], exact: Expected) -> Expected:

@@ -252,7 +252,7 @@ class Leg:
 
     def _join_final(self, u: arb, y: arb, clocks: dict[str, arb]) -> bool:
         final = self.final
-        if final is None:
+        if final is None or isinstance(final, Fall):
             return False
         try:
             if not isinstance(final, Taylor):

@@ -119,9 +119,9 @@ def _neighbours(flow: Flow, roots: list[arb]) -> tuple[arb | None, arb | None]:
         if flow.slope(u0) > 0:
             return u0, (others[k + 1] if k + 1 < len(others) else None)
         return (others[k - 1] if k else None), u0
-    hits = [r for r in roots if r.overlaps(u0)]
+    close = [r for r in roots if r.overlaps(u0)]
     slope = flow.slope(u0)
-    if len(hits) > 1 or (hits and slope.contains(0)):
+    if len(close) > 1 or (close and slope.contains(0)):
         raise MoreBits("the start is not told from a turning point")
     for root in roots:
         # the potential is positive at the start: its slope says on which side a root so close lies
