@@ -291,6 +291,27 @@ def demo(directory: str) -> int:
     return 0
 
 
+@cli.command()
+@click.argument("path", metavar="F.h5")
+@click.option(
+    "--verify",
+    type=click.IntRange(min=0),
+    default=0,
+    metavar="N",
+    help="Recompute N random samples and hold them against the stored bounds.",
+)
+@click.option("--json", "as_json", is_flag=True, help="One JSON document on stdout.")
+def inspect(path: str, verify: int, as_json: bool) -> int:
+    """Look at a result set: conformance, content, digest, bounds."""
+    from truefall.validate.inspection import inspect_set
+
+    found = inspect_set(path, verify=verify)
+    say(found.text(), err=as_json)
+    if as_json:
+        say(json.dumps(found.as_json(), indent=1))
+    return 0 if found.conforms else 1
+
+
 def _fault(error: BaseException) -> str:
     """One sentence for a fault of truefall; with TRUEFALL_DEBUG also the traceback, at once."""
     if os.environ.get("TRUEFALL_DEBUG"):

@@ -172,18 +172,18 @@ def test_file_is_of_the_present_table():
 def _handful():
     """Six orbits recomputed at every run: three fixed ones, three that change from day to day."""
     fixed = ["plunge/painleve-gullstrand", "flyby/harmonic", "light-flyby/isotropic"]
-    cheap = [n for n in ORBITS if not n.startswith(("satellite", "beside-critical", "comet"))]
+    cheap = [n for n in ORBITS if not n.startswith(("satellite", "beside-critical", "planet"))]
     day = datetime.datetime.now(datetime.UTC).date().toordinal()
     return fixed + [cheap[(day * 31 + k * len(cheap) // 3) % len(cheap)] for k in range(3)]
 
 
 @pytest.mark.parametrize("place", range(6))
 def test_file_is_what_the_script_makes(place):
-    """Recomputed with 26 digits: 1e-20 of each vector's size (sensitive orbits lose digits)."""
+    """Recomputed with 40 digits: 1e-28 of each vector's size (beside unstable circles ten go)."""
     name = _handful()[place]
     orbit = {**ORBITS[name], "times": ORBITS[name]["times"][:2]}
-    for row, stored in zip(script.rows(orbit, 26), ORBITS[name]["states"], strict=False):
-        assert script.difference(stored, row) < 1e-20, name
+    for row, stored in zip(script.rows(orbit, 40), ORBITS[name]["states"], strict=False):
+        assert script.difference(stored, row) < 1e-28, name
 
 
 def test_without_gmpy2():
