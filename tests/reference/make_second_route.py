@@ -1,6 +1,6 @@
 """Write tests/data/second_route.json: states, periods and ends by the second route.
 
-Run from anywhere (about ten minutes on one core with gmpy2, an hour or more without; it is optional):
+Run from anywhere (ten minutes on one core with gmpy2, far longer without; it is optional):
 
     python tests/reference/make_second_route.py [processes]
 
