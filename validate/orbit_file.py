@@ -132,8 +132,8 @@ def _refuse_missing(mapping: Mapping[str, Any], where: str, need_start: bool) ->
     if missing:
         parts.append(
             f"{', '.join(missing)} missing: truefall never guesses units, chart or clock; write "
-            "them into the orbit file (or the trajectory's header or sidecar); check and convert "
-            "also take options "
+            "them into the orbit file (or the trajectory's header or sidecar), or give check or "
+            "convert " + " ".join(f"--{key}" for key in missing)
         )
     if lacking:
         parts.append(
