@@ -173,12 +173,14 @@ class Taylor:
     def _newton(self, value: Callable[[arb], arb], slope: Callable[[arb], arb], x: arb) -> arb:
         """Newton on midpoints until the step stops shrinking; returns an exact number."""
         last = arb(10) * self.h
+        # the step after one this small is below the precision, by quadratic convergence
+        small = self.h * arb((1, -(self.flow.precision // 2) - 8))
         for _ in range(60):
             step = (value(x) / slope(x)).mid()
             x = (x - step).mid()
             if abs(x) > 1.2 * self.h:
                 x = x.sgn() * arb(self.h)
-            if not abs(step) < last / 2:
+            if abs(step) < small or not abs(step) < last / 2:
                 break
             last = abs(step)
         return x
