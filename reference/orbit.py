@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from fractions import Fraction
 from functools import cached_property
 from math import inf
@@ -72,8 +71,8 @@ class Orbit:
     def __init__(
         self,
         *,
-        position: Sequence[float],
-        velocity: Sequence[float],
+        position: npt.ArrayLike,
+        velocity: npt.ArrayLike,
         system: str = "geometric",
         gm: float = 1.0,
         particle: str = "massive",
