@@ -24,18 +24,23 @@ import numpy.typing as npt
 
 __all__ = [
     "CHARTS",
+    "HORIZON_RADII",
     "INGOING",
     "areal_radius",
     "chart_radius",
     "convert",
+    "horizon_gap",
     "radius_slope",
     "time_offset",
 ]
 
 INGOING = ("kerr-schild", "painleve-gullstrand", "eddington-finkelstein")
 CHARTS = ("areal", "isotropic", "harmonic", *INGOING)
+#: Chart radius of the horizon in the charts that end there.
+HORIZON_RADII = {"areal": 2.0, "isotropic": 0.5, "harmonic": 1.0}
 
 Floats = npt.NDArray[np.float64]
+_EPS = 2.0**-52
 
 
 def _known(chart: str) -> None:
@@ -54,12 +59,27 @@ def areal_radius(chart: str, rho: npt.ArrayLike) -> Floats:
     _known(chart)
     rho = np.asarray(rho, dtype=np.float64)
     if chart == "isotropic":
-        return rho + 1.0 + 0.25 / rho
+        with np.errstate(divide="ignore"):  # rho = 0 is infinitely far, beyond the horizon
+            return np.asarray(rho + 1.0 + 0.25 / rho)
     return rho + 1.0 if chart == "harmonic" else rho + 0.0
 
 
+def horizon_gap(chart: str, rho: npt.ArrayLike) -> Floats:
+    """``r - 2`` from a chart radius (GM = c = 1), exact to rounding however close to the horizon.
+
+    The difference of ``areal_radius`` and 2 would keep nothing of it in isotropic coordinates,
+    where ``r - 2 = (rho - 1/2)^2 / rho``.
+    """
+    _known(chart)
+    rho = np.asarray(rho, dtype=np.float64)
+    if chart == "isotropic":
+        with np.errstate(divide="ignore"):
+            return np.asarray((rho - 0.5) ** 2 / rho)
+    return rho - 1.0 if chart == "harmonic" else rho - 2.0
+
+
 def chart_radius(chart: str, r: npt.ArrayLike) -> Floats:
-    """Chart radius of an areal radius (GM = c = 1); NaN inside the horizon where it has none."""
+    """Chart radius of an areal radius (GM = c = 1); NaN where isotropic coordinates have none."""
     _known(chart)
     r = np.asarray(r, dtype=np.float64)
     if chart == "isotropic":
@@ -73,14 +93,22 @@ def radius_slope(chart: str, rho: npt.ArrayLike) -> Floats:
     _known(chart)
     rho = np.asarray(rho, dtype=np.float64)
     if chart == "isotropic":
-        return (1.0 - 0.5 / rho) * (1.0 + 0.5 / rho)
+        return np.asarray((rho - 0.5) / rho * ((rho + 0.5) / rho))
     return np.ones_like(rho)
 
 
-def _slope_difference(source: str, target: str, r: Floats) -> Floats:
+def _radius_and_slope(chart: str, r: Floats, gap: Floats) -> tuple[Floats, Floats]:
+    """Chart radius and ``dr/drho`` from ``r`` and ``r - 2``, no difference near the horizon."""
+    if chart == "isotropic":
+        root = np.sqrt(gap * (gap + 2.0))
+        beyond = 0.5 * (gap + root)  # rho - 1/2
+        rho = 0.5 + beyond
+        return rho, beyond / rho * ((beyond + 1.0) / rho)
+    return (gap + 1.0 if chart == "harmonic" else r), np.ones_like(gap)
+
+
+def _slope_difference(source: str, target: str, r: Floats, gap: Floats) -> Floats:
     """``g_target - g_source``, without the pole that ingoing charts share at ``r = 2``."""
-    if source == target:
-        return np.zeros_like(r)
     regular = {
         # g - 2/(r - 2): the part that stays finite at the horizon
         "kerr-schild": np.zeros_like(r),
@@ -89,7 +117,7 @@ def _slope_difference(source: str, target: str, r: Floats) -> Floats:
     }
     if source in INGOING and target in INGOING:
         return regular[target] - regular[source]
-    pole = 2.0 / (r - 2.0)
+    pole = 2.0 / gap
     if target in INGOING:
         return pole + regular[target] if source not in INGOING else regular[target]
     return -(pole + regular[source]) if source in INGOING else np.zeros_like(r)
@@ -103,11 +131,14 @@ def time_offset(source: str, target: str, r: npt.ArrayLike) -> Floats:
     Raises
     ------
     ValueError
-        For an unknown chart, or ``r <= 2`` where one of the charts stops at the horizon.
+        For an unknown chart, a radius that is not positive, or ``r <= 2`` where one of the
+        charts stops at the horizon.
     """
     _known(source)
     _known(target)
     r = np.asarray(r, dtype=np.float64)
+    if not np.all(r > 0.0):
+        raise ValueError("every radius must be greater than 0")
     static = (source not in INGOING) != (target not in INGOING)
     if static and np.any(r <= 2.0):
         raise ValueError(f"{source} and {target} share no points at or inside r = 2 GM/c^2")
@@ -159,42 +190,70 @@ def convert(
     Raises
     ------
     ValueError
-        For unknown charts, wrong shapes, or points that one of the charts does not cover.
+        For unknown charts, wrong shapes, numbers that are not finite, points that one of the
+        charts does not cover, and velocities along which the target's time does not advance:
+        ingoing radial light in eddington-finkelstein, or faster than light.
     """
     _known(source)
     _known(target)
-    x = np.asarray(position, dtype=np.float64) / (gm / c**2)
-    if x.shape[-1:] != (3,):
-        raise ValueError("position must have three components on its last axis")
+    x, v = _checked(position, velocity, gm, c)
     rho = np.linalg.norm(x, axis=-1, keepdims=True)
-    r = areal_radius(source, rho)
-    _check_covered(source, target, rho, r)
+    r, gap = areal_radius(source, rho), horizon_gap(source, rho)
+    _check_covered(source, target, rho)
+    if source == target:
+        return x * (gm / c**2), None if v is None else v * c
     unit = x / rho
+    rho_new, slope_new = _radius_and_slope(target, r, gap)
     # harmonic and areal differ by a shift: adding it to the vector keeps weak-field digits
-    shift = chart_radius(target, r) if "isotropic" in (source, target) else None
-    moved = unit * shift if shift is not None else x + unit * (_shift(target) - _shift(source))
+    shift = _shift(target) - _shift(source)
+    moved = unit * rho_new if "isotropic" in (source, target) else x + unit * shift
     new = moved * (gm / c**2)
-    if velocity is None:
+    if v is None:
         return new, None
-    v = np.asarray(velocity, dtype=np.float64) / c
-    if v.shape != x.shape:
-        raise ValueError("velocity must have the shape of position")
     radial = np.sum(unit * v, axis=-1, keepdims=True)
     across = v - unit * radial
     rdot = radius_slope(source, rho) * radial
-    rho_new = chart_radius(target, r)
-    pace = 1.0 + _slope_difference(source, target, r) * rdot  # dT_target / dT_source
-    turned = across * (rho_new / rho) + unit * (rdot / radius_slope(target, rho_new))
+    change = _slope_difference(source, target, r, gap) * rdot
+    pace = 1.0 + change  # dT_target / dT_source
+    if np.any(pace <= 8 * _EPS * (1.0 + np.abs(change))):
+        raise ValueError(
+            f"the time of {target} does not advance along a velocity: it is ingoing radial light "
+            "or faster than light"
+        )
+    turned = across * (rho_new / rho) + unit * (rdot / slope_new)
     return new, turned / pace * c
+
+
+def _checked(
+    position: npt.ArrayLike, velocity: npt.ArrayLike | None, gm: float, c: float
+) -> tuple[Floats, Floats | None]:
+    """Positions in GM/c^2 and velocities in c, or ValueError."""
+    if not (np.isfinite(gm) and gm > 0 and np.isfinite(c) and c > 0):
+        raise ValueError("gm and c must be positive and finite")
+    x = np.asarray(position, dtype=np.float64) / (gm / c**2)
+    if x.shape[-1:] != (3,):
+        raise ValueError("position must have three components on its last axis")
+    if not np.all(np.isfinite(x)):
+        raise ValueError("position must be finite")
+    if velocity is None:
+        return x, None
+    v = np.asarray(velocity, dtype=np.float64) / c
+    if v.shape != x.shape:
+        raise ValueError("velocity must have the shape of position")
+    if not np.all(np.isfinite(v)):
+        raise ValueError("velocity must be finite")
+    return x, v
 
 
 def _shift(chart: str) -> float:
     return -1.0 if chart == "harmonic" else 0.0
 
 
-def _check_covered(source: str, target: str, rho: Floats, r: Floats) -> None:
-    smallest = {"areal": 2.0, "isotropic": 0.5, "harmonic": 1.0}
-    if source in smallest and np.any(rho <= smallest[source]):
+def _check_covered(source: str, target: str, rho: Floats) -> None:
+    if np.any(rho <= 0.0):
+        raise ValueError("a point lies at r = 0, which no chart covers")
+    if source in HORIZON_RADII and np.any(rho <= HORIZON_RADII[source]):
         raise ValueError(f"a point lies at or inside the horizon, which {source} does not cover")
-    if target in smallest and np.any(r <= 2.0):
+    # from here on only an ingoing source, whose radius is the areal one, can lie inside
+    if target in HORIZON_RADII and source not in HORIZON_RADII and np.any(rho <= 2.0):
         raise ValueError(f"a point lies at or inside the horizon, which {target} does not cover")

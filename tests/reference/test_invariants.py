@@ -5,10 +5,10 @@ from __future__ import annotations
 import mpmath
 import numpy as np
 import pytest
-from hypothesis import assume, given
+from hypothesis import assume, given, settings
 from hypothesis import strategies as st
 
-from truefall.reference.charts import CHARTS
+from truefall.reference.charts import CHARTS, convert
 from truefall.reference.invariants import state_invariants
 
 
@@ -129,3 +129,96 @@ def test_an_earth_satellite_keeps_its_energy_digits():
         assert np.linalg.norm(found.angular_momentum[0]) == pytest.approx(
             exact.angular_momentum.value, rel=1e-14
         )
+
+
+@settings(max_examples=150)
+@given(
+    name=st.sampled_from(("areal", "isotropic", "harmonic")),
+    size=st.floats(-6, 0),
+    seed=st.integers(0, 2**32 - 1),
+)
+def test_close_to_the_horizon_static_charts_keep_what_the_position_keeps(name, size, seed):
+    """Relative errors no larger than what one rounding of |x| does to the distance from there."""
+    draw = np.random.default_rng(seed).uniform(-1, 1, (2, 3))
+    edge = {"areal": 2.0, "isotropic": 0.5, "harmonic": 1.0}[name]
+    x = draw[0] / np.linalg.norm(draw[0]) * edge * (1 + 10.0**size)
+    beyond = np.linalg.norm(x) - edge
+    light_speed = {
+        "areal": beyond / (2 + beyond),
+        "isotropic": beyond / (1 + beyond) / 4,
+        "harmonic": beyond / (2 + beyond),
+    }[name]
+    v = 0.5 * light_speed * draw[1]
+    with mpmath.workdps(50):
+        true = contracted(name, x, v)
+        assume(true is not None)
+        energy, rate = float(true[0]), float(true[2])
+        momentum = np.array([float(c) for c in true[1]])
+    found = state_invariants([x], [v], name, "geometric", 1.0, "massive")
+    condition = 1 + edge / beyond
+
+    assert found.energy[0] == pytest.approx(energy, rel=8 * 2.0**-52 * condition)
+    assert found.rate[0] == pytest.approx(rate, rel=8 * 2.0**-52 * condition)
+    assert np.allclose(
+        found.angular_momentum[0], momentum, rtol=0,
+        atol=8 * 2.0**-52 * condition * np.linalg.norm(x) * np.linalg.norm(v) / rate * 4,
+    )  # fmt: skip
+
+
+@settings(max_examples=100)
+@given(source=st.sampled_from(CHARTS), target=st.sampled_from(CHARTS), size=st.floats(0.6, 9),
+       seed=st.integers(0, 2**32 - 1))  # fmt: skip
+def test_every_chart_sees_the_same_constants(source, target, size, seed):
+    """A state carried to another chart keeps E - 1 and L, each to the rounding of the state."""
+    r = 10.0**size
+    draw = np.random.default_rng(seed).uniform(-1, 1, (2, 3))
+    x = draw[0] / np.linalg.norm(draw[0]) * r
+    v = 0.5 * draw[1] / np.sqrt(r)
+    here = state_invariants([x], [v], source, "geometric", 1.0, "massive")
+    assume(here.rate[0] > 0.2)
+    there = state_invariants(
+        *(np.atleast_2d(a) for a in convert(x, v, source, target)),
+        target, "geometric", 1.0, "massive",
+    )  # fmt: skip
+    # an ulp of v, and of 1 in dT'/dT, moves v^2/2 and v.p by v ulps of v: all are of order 1/r
+    rounding = 64 * 2.0**-52 / here.rate[0] ** 3
+    scale = here.scale[0]
+    if "eddington-finkelstein" in (source, target):
+        # there dr/dT stands in q by itself: its last place counts in full
+        scale = max(scale, np.linalg.norm(v))
+
+    assert abs(there.energy_minus_one[0] - here.energy_minus_one[0]) <= rounding * scale
+    assert np.linalg.norm(there.angular_momentum - here.angular_momentum) <= (
+        rounding * r * np.linalg.norm(v)
+    )
+
+
+def test_states_outside_a_chart_have_no_constants():
+    """At and behind the horizon of static charts, faster than light, and at r = 0: NaN."""
+    for name, edge in (("areal", 2.0), ("isotropic", 0.5), ("harmonic", 1.0)):
+        x = [[0.6 * edge * s, 0.8 * edge * s, 0.0] for s in (0.4, 1.0, 8.0)]
+        for particle in ("massive", "light"):
+            found = state_invariants(x, np.zeros((3, 3)), name, "geometric", 1.0, particle)
+            value = found.rate if particle == "massive" else found.null
+            assert np.array_equal(np.isnan(value), [True, True, False])
+    for name in CHARTS:
+        found = state_invariants([[9.0, 0, 0]], [[0, 1.2, 0]], name, "geometric", 1.0, "massive")
+        assert np.isnan(found.energy[0])
+        found = state_invariants([[0.0, 0, 0]], [[0, 0.1, 0]], name, "geometric", 1.0, "massive")
+        assert np.isnan(found.energy[0])
+
+
+@pytest.mark.parametrize(
+    ("words", "message"),
+    [
+        (("polar", "SI", 1.0, "massive"), "chart is 'polar'"),
+        (("areal", "imperial", 1.0, "massive"), "system is 'imperial'"),
+        (("areal", "SI", -1.0, "massive"), "gm is -1.0"),
+        (("areal", "SI", float("nan"), "massive"), "gm is nan"),
+        (("areal", "SI", 1.0, "photon"), "particle is 'photon'"),
+    ],
+)
+def test_unknown_words_are_refused(words, message):
+    """By name and with what is allowed."""
+    with pytest.raises(ValueError, match=message):
+        state_invariants([[9.0, 0, 0]], [[0, 0.1, 0]], *words)
