@@ -86,4 +86,5 @@ def test_halving_the_step_divides_the_error_by_sixteen(program, tmp_path):
     errors = [r.as_json()["error"]["position"]["max"] for r in (coarse, fine)]
 
     assert [coarse.verdict, fine.verdict] == ["fail", "pass"]
-    assert errors[0] / errors[1] == pytest.approx(16.0, rel=0.1)
+    # 16 + O(step): 16.85, 16.46 seen at the last two halvings before rounding takes part
+    assert 15.0 < errors[0] / errors[1] < 17.0

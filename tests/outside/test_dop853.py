@@ -87,8 +87,8 @@ def painleve_run(position, velocity, times, rtol):
     return np.array(rows)
 
 
-def write_csv(path: Path, rows, **metadata) -> Path:
-    """A file as a user would write it: shortest form, metadata in the header."""
+def write_csv(path: Path, rows, *, digits=0, **metadata) -> Path:
+    """A file as a user would write it: shortest form or few digits, metadata in the header."""
     words = {
         "system": "geometric",
         "gm": 1.0,
@@ -97,7 +97,8 @@ def write_csv(path: Path, rows, **metadata) -> Path:
     } | metadata
     lines = [f"# {k} = {json.dumps(v)}" for k, v in words.items()]
     lines.append("time,x,y,z,vx,vy,vz")
-    lines += [",".join(repr(float(v)) for v in row) for row in rows]
+    text = (lambda v: f"{v:.{digits - 1}e}") if digits else (lambda v: repr(float(v)))
+    lines += [",".join(map(text, row)) for row in rows]
     path.write_text("\n".join(lines) + "\n", encoding="utf-8")
     return path
 
@@ -123,6 +124,30 @@ def test_the_verdict_follows_the_tolerance_of_the_integrator(tmp_path):
 
     assert verdicts == ["fail", "fail", "pass"]
     assert errors[0] > 30 * errors[1] > 900 * errors[2]
+
+
+def test_the_reported_error_is_the_one_that_a_finer_run_shows(tmp_path):
+    """Between loose and tight: the same number without truefall, and a verdict that turns there."""
+    times = np.linspace(0.0, 600.0, 121)
+    finest = harmonic_run(*STRONG, times, 1e-13)
+    for rtol in (1e-5, 1e-7, 1e-9):
+        rows = harmonic_run(*STRONG, times, rtol)
+        seen = np.linalg.norm(rows[:, 1:4] - finest[:, 1:4], axis=1).max()
+        path = write_csv(tmp_path / f"run{rtol}.csv", rows, chart="harmonic")
+        (result,) = check_file(path, budget={"position": 1.0})
+
+        assert result.comparison.distance.max() == pytest.approx(seen, rel=5e-3)
+        assert verdict_and_error(path, position=1.01 * seen)[0] == "pass"
+        assert verdict_and_error(path, position=0.99 * seen)[0] == "fail"
+
+
+def test_few_digits_leave_a_tight_budget_undecided(tmp_path):
+    """A good run in seven digits: neither passed nor failed below what the digits can show."""
+    rows = harmonic_run(*STRONG, np.linspace(0.0, 200.0, 41), 1e-12)
+    path = write_csv(tmp_path / "run.csv", rows, chart="harmonic", digits=7)
+
+    assert verdict_and_error(path, position=1e-7)[0] == "undecided"
+    assert verdict_and_error(path, position=1e-3)[0] == "pass"
 
 
 def test_an_earth_satellite_in_metres_follows_it_too(tmp_path):
