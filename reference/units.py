@@ -8,8 +8,20 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 from fractions import Fraction
+from math import isfinite
 
-__all__ = ["CONSTANTS", "SYSTEM", "SYSTEMS", "Constant", "System", "length_in", "speed_of_light"]
+__all__ = [
+    "CONSTANTS",
+    "LENGTHS",
+    "SYSTEM",
+    "SYSTEMS",
+    "TIMES",
+    "Constant",
+    "System",
+    "length_in",
+    "speed_of_light",
+    "time_in",
+]
 
 SYSTEMS = ("geometric", "SI", "astronomical")
 
@@ -106,10 +118,41 @@ CONSTANTS = {
 
 
 def speed_of_light(system: str) -> Fraction:
-    """Exact speed of light in a system's units; raises KeyError for an unknown system."""
+    """Exact speed of light in a system's units.
+
+    Raises
+    ------
+    ValueError
+        For an unknown system.
+    """
+    if system not in SYSTEM:
+        raise ValueError(f"system is {system!r}; allowed are {', '.join(SYSTEMS)}")
     return SYSTEM[system].c_exact
 
 
+def _exact_gm(gm: float) -> Fraction:
+    if not (isfinite(gm) and gm > 0):
+        raise ValueError(f"gm is {gm}; it must be positive and finite")
+    return Fraction(gm)
+
+
 def length_in(system: str, gm: float) -> float:
-    """``GM/c^2`` in a system's length unit."""
-    return float(Fraction(gm) / SYSTEM[system].c_exact ** 2)
+    """``GM/c^2`` in a system's length unit, correctly rounded.
+
+    Raises
+    ------
+    ValueError
+        For an unknown system or a ``gm`` that is not positive and finite.
+    """
+    return float(_exact_gm(gm) / speed_of_light(system) ** 2)
+
+
+def time_in(system: str, gm: float) -> float:
+    """``GM/c^3`` in a system's time unit, correctly rounded.
+
+    Raises
+    ------
+    ValueError
+        For an unknown system or a ``gm`` that is not positive and finite.
+    """
+    return float(_exact_gm(gm) / speed_of_light(system) ** 3)
