@@ -29,6 +29,7 @@ from truefall.validate.starts import Start, find_start
 
 if TYPE_CHECKING:
     from truefall.reference import Orbit
+    from truefall.validate.causes import Explanation
     from truefall.validate.orbit_file import OrbitSpec
     from truefall.validate.trajectory import Trajectory
 
@@ -48,6 +49,7 @@ class CheckResult:
     for a verdict that no tolerance explains.  ``trajectory`` holds the rows that were compared
     (those the orbit reaches), of ``samples`` in the file; ``tolerances`` are the budget's;
     ``certified`` of the rows were held against enclosed values, the others against the table.
+    ``explanation`` holds the causes, where they were asked for.
     """
 
     file: str
@@ -67,6 +69,7 @@ class CheckResult:
     tolerances: Mapping[str, float] = field(default_factory=dict)
     start_from: str = ""
     reference: str = "exact"
+    explanation: Explanation | None = None
 
     def as_json(self) -> dict[str, Any]:
         """The object of the documentation for this file."""
