@@ -180,13 +180,21 @@ class Enclosure:
         return found
 
     def reduction(self, clock: str, other: str) -> tuple[float, Floats, Floats] | None:
-        """First elapsed time of the period that holds the start, the period's words, the turn's."""
+        """First elapsed time of the period that holds the start, the period's words, the turn's.
+
+        The radial period, or a whole turn of a circular orbit; None for orbits without either.
+        """
 
         def take(solution: Solution) -> tuple[arb, ...] | None:
+            scale = self._length if other == "tau" and not self.motion.mu else self._time
+            if solution.circular:  # which has no radial period, but repeats after every turn
+                one = solution.at(clock, fmpq(1))
+                length = 2 * arb.pi() / one.azimuth
+                reading = length * (one.chart if other == "chart" else one.tau)
+                return arb(0), length * self._time, reading * scale, arb(0)
             period = solution.period
             if period is None:
                 return None
-            scale = self._length if other == "tau" and not self.motion.mu else self._time
             turn = solution.flow.momentum * period.s
             turn -= 2 * arb.pi() * (turn / (2 * arb.pi())).mid().floor().mid()
             low = -period.before[clock] - solution.start[clock]

@@ -14,7 +14,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 import numpy.typing as npt
 
-from truefall.reference.table_source import planar, reduction
+from truefall.reference.table_source import circle_points, planar, reduction
 
 if TYPE_CHECKING:
     from truefall.reference.orbit import Orbit
@@ -26,12 +26,17 @@ Floats = npt.NDArray[np.float64]
 _DEGREE = 13
 _FIRST_INTERVALS = 12
 _MAX_INTERVALS = 20_000
+_ANGLES = 64
+#: Least half-width of an interval in units of the last place of its times.
+_NARROW = 2.0**10
 #: Largest error of the fit, in units of eps times the vector's size, before an interval splits:
 #: position, velocity, clock.
-_GOAL = np.array([0.5, 1.0, 0.5])
+_GOAL = np.array([0.5, 1.0, 1.0])
 _EPS = float(np.finfo(np.float64).eps)
 #: Largest change over an interval, relative to the size: keeps Horner's rounding small.
 _SPREAD = 0.25
+#: The same of velocities: more than half, which is what one that rises from rest has.
+_SPREAD_OF_SPEED = 0.6
 #: Rounding of the evaluation in the same units: reduction, Horner's rule, rotation (measured).
 _ROUNDING = 3.5
 
@@ -76,18 +81,30 @@ class Table:
         ValueError
             If a time lies outside the table.
         """
-        from truefall.reference.table_kernel import fill
-
         stamps = np.ascontiguousarray(times, dtype=np.float64)
         if stamps.size and (stamps.min() < self.first or stamps.max() > self.last):
             raise ValueError(f"the table covers times from {self.first!r} to {self.last!r}")
         position, velocity = np.empty((stamps.size, 3)), np.empty((stamps.size, 3))
         clock = np.empty(stamps.size)
-        fill(
-            stamps, self.start, self.edges, self.centres, self.scales, self.coefficients,
-            self.period, self.turn, self.frame, self.frame_low, position, velocity, clock,
-        )  # fmt: skip
+        self.fill(stamps, position, velocity, clock)
         return position, velocity, clock
+
+    def fastest(self) -> float:
+        """Largest speed at the middle of a piece: the measure where a speed passes zero."""
+        return float(np.linalg.norm(self.coefficients[:, 0, 2:4], axis=1).max())
+
+    def fill(self, times: Floats, position: Floats, velocity: Floats, clock: Floats) -> None:
+        """As :meth:`at`, into arrays (n, 3), (n, 3), (n,) at hand; times are not checked.
+
+        Runs without the interpreter's lock: several threads may share a table.
+        """
+        from truefall.reference.table_kernel import fill
+
+        fill(
+            times, self.start, self.edges, self.centres, self.scales, self.coefficients,
+            self.period, self.turn, self.frame, self.frame_low, circle_points(_ANGLES),
+            position, velocity, clock,
+        )  # fmt: skip
 
 
 class _Fitter:
@@ -106,9 +123,9 @@ class _Fitter:
         self.worst = np.zeros(3)
 
     def fit(self, low: float, high: float) -> Floats | None:
-        """Coefficients (d + 1, 5) on an interval, or None if the fit is not good enough."""
+        """Coefficients (d + 2, 5) on an interval, or None if the fit is not good enough."""
         centre, half = 0.5 * (low + high), 0.5 * (high - low)
-        if half < 2**20 * np.spacing(max(abs(low), abs(high))):
+        if half < _NARROW * np.spacing(max(abs(low), abs(high))):
             raise ArithmeticError("the table does not reach the accuracy of float64")
         places = centre + half * np.concatenate([[0.0], self.nodes, self.checks])
         words = planar(self.orbit, places)  # (m, 5, 2): two words each
@@ -134,18 +151,23 @@ class _Fitter:
                 error[:, 4].max() / size[2],
             ]
         )
-        moved = np.linalg.norm(change[:, :2], axis=1).max() / size[0]
-        turned = np.linalg.norm(change[:, 2:4], axis=1).max() / size[1]
-        if np.any(relative > _GOAL * _EPS) or moved > _SPREAD or turned > 2 * _SPREAD:
+        fastest = max(np.hypot(words[test, 2, 0], words[test, 3, 0]).max(), 1e-300)
+        moved = np.hypot(change[:, 0], change[:, 1]).max() / size[0]
+        turned = np.hypot(change[:, 2], change[:, 3]).max() / fastest
+        if np.any(relative > _GOAL * _EPS) or moved > _SPREAD or turned > _SPREAD_OF_SPEED:
             return None
         self.worst = np.maximum(self.worst, relative)
-        powers[0] += base
-        return powers
+        total = powers[0] + base  # whose rounding is kept as a last row
+        rest = powers[0] - (total - base)
+        powers[0] = total
+        return np.vstack([powers, rest])
 
     @staticmethod
     def _sizes(values: Floats) -> Floats:
-        position = np.linalg.norm(values[:, :2], axis=1).min()
-        velocity = np.linalg.norm(values[:, 2:4], axis=1).max()  # it may pass through zero
+        # hypot: the squares of speeds that die out exponentially would vanish
+        position = np.hypot(values[:, 0], values[:, 1]).min()
+        speeds = np.hypot(values[:, 2], values[:, 3])
+        velocity = max(speeds.min(), 0.4 * speeds.max())  # it may pass through zero
         clock = np.abs(values[:, 4]).max() + np.ptp(values[:, 4])
         return np.array([position, max(velocity, 1e-300), max(clock, 1e-300)])
 

@@ -5,7 +5,7 @@ No fast-math, no unbounded loop; held against its interpreted source in the test
 
 from __future__ import annotations
 
-from math import cos, floor, sin
+from math import floor
 
 import numpy as np
 import numpy.typing as npt
@@ -16,7 +16,7 @@ __all__ = ["fill"]
 Floats = npt.NDArray[np.float64]
 
 
-@njit(cache=True, error_model="numpy")
+@njit(cache=True, error_model="numpy", nogil=True)
 def _two_sum(a: float, b: float) -> tuple[float, float]:
     """Knuth's exact sum: ``a + b = s + e``."""
     s = a + b
@@ -24,7 +24,7 @@ def _two_sum(a: float, b: float) -> tuple[float, float]:
     return s, (a - (s - t)) + (b - t)
 
 
-@njit(cache=True, error_model="numpy")
+@njit(cache=True, error_model="numpy", nogil=True)
 def _two_product(a: float, b: float) -> tuple[float, float]:
     """Dekker's exact product (Veltkamp's split): ``a b = p + e``."""
     p = a * b
@@ -37,7 +37,7 @@ def _two_product(a: float, b: float) -> tuple[float, float]:
     return p, ((a1 * b1 - p) + a1 * b2 + a2 * b1) + a2 * b2
 
 
-@njit(cache=True, error_model="numpy")
+@njit(cache=True, error_model="numpy", nogil=True)
 def _find(edges: Floats, time: float, guess: int) -> int:
     """Index of the interval that holds ``time``; neighbours of the last one are tried first."""
     last = edges.size - 2
@@ -58,21 +58,51 @@ def _find(edges: Floats, time: float, guess: int) -> int:
     return low
 
 
-@njit(cache=True, error_model="numpy")
-def _turned(frame: Floats, low: Floats, c: float, s: float, out: Floats) -> None:
-    """``frame`` turned by an angle: (3, 2, 2), each entry as two words."""
+@njit(cache=True, error_model="numpy", nogil=True)
+def _rotation(turns: float, turn: Floats, circle: Floats, out: Floats) -> None:
+    """Cosine and sine of ``turns`` times an angle, two words each: ``out`` (4,).
+
+    The angle is taken from the nearest of the circle's even angles; the cosine and sine of the
+    rest, at most pi/128, are those of a short series, and the rest of the cosine is that of 1.
+    """
+    p, e = _two_product(turns, turn[0])
+    whole = floor(p / 6.283185307179586)
+    q, f = _two_product(whole, 6.283185307179586)
+    high = p - q
+    low = e - f + turns * turn[1] - whole * 2.4492935982947064e-16
+    count = circle.shape[0]
+    step = 6.283185307179586 / count
+    near = floor(high / step + 0.5)
+    # near is a whole number below 2^9 and count a power of two: near 2 pi/count is exact to the
+    # words of 2 pi
+    p, e = _two_product(near, step)
+    rest = (high - p) - e + low - near * (2.4492935982947064e-16 / count)
+    square = rest * rest
+    sine = rest * (1.0 + square * (-1.0 / 6.0 + square * (1.0 / 120.0 - square / 5040.0)))
+    less = square * (-0.5 + square * (1.0 / 24.0 + square * (-1.0 / 720.0 + square / 40320.0)))
+    k = int(near) % count
+    c, c_low, s, s_low = circle[k, 0], circle[k, 1], circle[k, 2], circle[k, 3]
+    out[0], out[1] = _two_sum(c, c_low + (c * less - s * sine))
+    out[2], out[3] = _two_sum(s, s_low + (s * less + c * sine))
+
+
+@njit(cache=True, error_model="numpy", nogil=True)
+def _turned(frame: Floats, low: Floats, angle: Floats, out: Floats) -> None:
+    """``frame`` turned by an angle with cosine and sine ``angle`` (4,): (3, 2, 2), two words."""
     for row in range(3):
         for column in range(2):
             first, second = (0, 1) if column == 0 else (1, 0)
-            sign = s if column == 0 else -s
+            sign = 1.0 if column == 0 else -1.0
+            c, c_low, s, s_low = angle[0], angle[1], sign * angle[2], sign * angle[3]
             p, e = _two_product(frame[row, first], c)
-            q, f = _two_product(frame[row, second], sign)
+            q, f = _two_product(frame[row, second], s)
             high, rest = _two_sum(p, q)
-            rest += e + f + low[row, first] * c + low[row, second] * sign
+            rest += e + f + low[row, first] * c + low[row, second] * s
+            rest += frame[row, first] * c_low + frame[row, second] * s_low
             out[row, column, 0], out[row, column, 1] = _two_sum(high, rest)
 
 
-@njit(cache=True, error_model="numpy")
+@njit(cache=True, error_model="numpy", nogil=True)
 def fill(
     times: Floats,
     start: float,
@@ -84,6 +114,7 @@ def fill(
     turn: Floats,
     frame: Floats,
     frame_low: Floats,
+    circle: Floats,
     position: Floats,
     velocity: Floats,
     clock: Floats,
@@ -94,19 +125,24 @@ def fill(
     ----------
     edges, centres, scales : (k + 1,), (k,), (k,)
         Intervals of elapsed time, their centres and the reciprocals of their half-widths.
-    coefficients : (k, d + 1, 5)
-        Planar position, planar velocity and clock as powers of the scaled time.
+    coefficients : (k, d + 2, 5)
+        Planar position, planar velocity and clock as powers of the scaled time; last the second
+        words of the constant terms.
     period : (4,)
         Radial period and the clock's advance over it, each as two words; zero if none.
     turn : (2,)
         Azimuth per period modulo 2 pi, as two words.
     frame, frame_low : (3, 2)
         Unit vectors of the orbit's plane, as two words.
+    circle : (m, 4)
+        Cosine and sine, two words each, of ``m`` even angles; ``m`` a power of two.
     """
-    degree = coefficients.shape[1] - 1
+    low_row = coefficients.shape[1] - 1
+    degree = low_row - 1
     index, known = 0, 0.0
     turned = np.zeros((3, 2, 2))
-    _turned(frame, frame_low, 1.0, 0.0, turned)
+    angle = np.array([1.0, 0.0, 0.0, 0.0])
+    _turned(frame, frame_low, angle, turned)
     for row in range(times.size):
         high, low = _two_sum(times[row], -start)
         turns = 0.0
@@ -122,26 +158,45 @@ def fill(
                     high, rest = _two_sum(high, period[0])
                     low += rest + period[1]
         if turns != known:
-            p, e = _two_product(turns, turn[0])
-            whole = floor(p / 6.283185307179586)
-            q, f = _two_product(whole, 6.283185307179586)
-            angle = (p - q) + (e - f + turns * turn[1] - whole * 2.4492935982947064e-16)
-            c, s = cos(angle), sin(angle)
-            _turned(frame, frame_low, c, s, turned)
+            _rotation(turns, turn, circle, angle)
+            _turned(frame, frame_low, angle, turned)
             known = turns
         index = _find(edges, high, index)
         x = ((high - centres[index]) + low) * scales[index]
+        # c0 + x q(x), the even and odd powers of q apart: two short chains in place of a long one,
+        # and all but the last sum rounds quantities that are small beside c0
+        square = x * x
         a = coefficients[index, degree, 0]
+        a2 = coefficients[index, degree - 1, 0]
         b = coefficients[index, degree, 1]
+        b2 = coefficients[index, degree - 1, 1]
         va = coefficients[index, degree, 2]
+        va2 = coefficients[index, degree - 1, 2]
         vb = coefficients[index, degree, 3]
+        vb2 = coefficients[index, degree - 1, 3]
         tau = coefficients[index, degree, 4]
-        for k in range(degree - 1, -1, -1):
-            a = a * x + coefficients[index, k, 0]
-            b = b * x + coefficients[index, k, 1]
-            va = va * x + coefficients[index, k, 2]
-            vb = vb * x + coefficients[index, k, 3]
-            tau = tau * x + coefficients[index, k, 4]
+        tau2 = coefficients[index, degree - 1, 4]
+        for k in range(degree - 2, 1, -2):
+            a = a * square + coefficients[index, k, 0]
+            a2 = a2 * square + coefficients[index, k - 1, 0]
+            b = b * square + coefficients[index, k, 1]
+            b2 = b2 * square + coefficients[index, k - 1, 1]
+            va = va * square + coefficients[index, k, 2]
+            va2 = va2 * square + coefficients[index, k - 1, 2]
+            vb = vb * square + coefficients[index, k, 3]
+            vb2 = vb2 * square + coefficients[index, k - 1, 3]
+            tau = tau * square + coefficients[index, k, 4]
+            tau2 = tau2 * square + coefficients[index, k - 1, 4]
+        a = (a * square + coefficients[index, 1, 0]) + x * a2
+        a = coefficients[index, 0, 0] + (x * a + coefficients[index, low_row, 0])
+        b = (b * square + coefficients[index, 1, 1]) + x * b2
+        b = coefficients[index, 0, 1] + (x * b + coefficients[index, low_row, 1])
+        va = (va * square + coefficients[index, 1, 2]) + x * va2
+        va = coefficients[index, 0, 2] + (x * va + coefficients[index, low_row, 2])
+        vb = (vb * square + coefficients[index, 1, 3]) + x * vb2
+        vb = coefficients[index, 0, 3] + (x * vb + coefficients[index, low_row, 3])
+        tau = (tau * square + coefficients[index, 1, 4]) + x * tau2
+        tau = coefficients[index, 0, 4] + (x * tau + coefficients[index, low_row, 4])
         for k in range(3):
             low_part = turned[k, 0, 1] * a + turned[k, 1, 1] * b
             position[row, k] = turned[k, 0, 0] * a + (turned[k, 1, 0] * b + low_part)

@@ -2,15 +2,17 @@
 
 from __future__ import annotations
 
+from functools import cache
 from typing import TYPE_CHECKING
 
 import numpy as np
 import numpy.typing as npt
+from flint import arb, ctx
 
 if TYPE_CHECKING:
     from truefall.reference.orbit import Orbit
 
-__all__ = ["azimuths", "planar", "reduction"]
+__all__ = ["azimuths", "circle_points", "planar", "reduction"]
 
 Floats = npt.NDArray[np.float64]
 
@@ -33,8 +35,23 @@ def azimuths(orbit: Orbit, elapsed: Floats) -> Floats:
     return np.array(orbit.enclosure.azimuths(orbit.engine_clocks[0], orbit.engine_times(elapsed)))
 
 
+@cache
+def circle_points(count: int) -> Floats:
+    """Cosine and sine of ``count`` even angles of a circle, two words each, (count, 4)."""
+    found = np.empty((count, 4))
+    with ctx.workprec(256):
+        for k in range(count):
+            angle = 2 * arb.pi() * k / count
+            for j, ball in enumerate((angle.cos(), angle.sin())):
+                high = float(ball.mid())
+                found[k, 2 * j : 2 * j + 2] = high, float((ball - arb(high)).mid())
+    return found
+
+
 def reduction(orbit: Orbit) -> tuple[float, float, Floats, Floats] | None:
-    """One radial period in elapsed time and what it adds, each as two words; None if none.
+    """One period in elapsed time and what it adds, each as two words; None if none.
+
+    The radial period, or the whole turn of a circular orbit.
 
     Returns
     -------

@@ -21,16 +21,15 @@ from truefall.validate.judging import (
     Floor,
     floor_of,
     judgements_of,
-    margins_of,
     position_tolerance,
 )
-from truefall.validate.screening import MANY_ROWS, decisive_rows, replaced, tabled_expected
 from truefall.validate.starts import Start, find_start
 
 if TYPE_CHECKING:
     from truefall.reference import Orbit
     from truefall.validate.causes import Explanation
     from truefall.validate.orbit_file import OrbitSpec
+    from truefall.validate.streaming.totals import Totals
     from truefall.validate.trajectory import Trajectory
 
 __all__ = ["CheckResult", "Floor", "check_file", "check_trajectory", "exit_status", "worst_verdict"]
@@ -49,7 +48,8 @@ class CheckResult:
     for a verdict that no tolerance explains.  ``trajectory`` holds the rows that were compared
     (those the orbit reaches), of ``samples`` in the file; ``tolerances`` are the budget's;
     ``certified`` of the rows were held against enclosed values, the others against the table.
-    ``explanation`` holds the causes, where they were asked for.
+    ``explanation`` holds the causes, where they were asked for.  Of a long file only the rows
+    that matter are in memory; ``totals`` then holds the statistics of all.
     """
 
     file: str
@@ -70,6 +70,7 @@ class CheckResult:
     start_from: str = ""
     reference: str = "exact"
     explanation: Explanation | None = None
+    totals: Totals | None = None
 
     def as_json(self) -> dict[str, Any]:
         """The object of the documentation for this file."""
@@ -132,6 +133,10 @@ def check_file(
     if budget:
         layer["budget"] = dict(budget)
     try:
+        if not fit and against is None:
+            long = _long_file(path, layer, orbit_file)
+            if long is not None:
+                return long
         trajectories = read_trajectories(path, overrides=layer, orbit_file=orbit_file)
     except InputError as error:
         return [CheckResult(str(path), Path(path).stem, "unusable", str(error))]
@@ -142,6 +147,31 @@ def check_file(
         except InputError as error:
             results.append(CheckResult(str(path), trajectory.name, "unusable", str(error)))
     return results
+
+
+def _long_file(
+    path: str | Path, layer: Mapping[str, Any], orbit_file: str | Path | None
+) -> list[CheckResult] | None:
+    """Results for a file whose rows are better not all read into memory; None for others."""
+    from truefall.validate.formats import long_rows
+
+    with long_rows(path, overrides=layer, orbit_file=orbit_file) as sources:
+        if not sources:
+            return None
+        from truefall.validate.streaming.long_check import check_rows
+        from truefall.validate.streaming.rows import first_row
+
+        results: list[CheckResult] = []
+        for rows in sources:
+            try:
+                start = find_start(first_row(rows), fit=False, stored=None)
+                result = check_rows(rows, start)
+            except InputError as error:
+                result = CheckResult(str(path), rows.head.name, "unusable", str(error))
+            if result is None:  # no table of this orbit: every row exactly, in memory
+                return None
+            results.append(result)
+        return results
 
 
 def _part(trajectory: Trajectory, keep: npt.NDArray[np.bool_]) -> Trajectory:
@@ -168,7 +198,7 @@ def _part(trajectory: Trajectory, keep: npt.NDArray[np.bool_]) -> Trajectory:
     )
 
 
-def _expected(orbit: Orbit, times: Floats) -> Expected:
+def exact_expected(orbit: Orbit, times: Floats) -> Expected:
     """The exact solution at the time stamps, nothing interpolated.
 
     The engine bounds the high word alone; value and second word together are proven to
@@ -207,13 +237,22 @@ def check_trajectory(
     InputError
         If it cannot be judged at all.
     """
+    from truefall.validate.screening import MANY_ROWS
+
     stored = None if against is None else load_stored(against, trajectory)
     start = find_start(trajectory, fit=fit, stored=stored)
+    if stored is None and len(trajectory) >= MANY_ROWS:
+        from truefall.validate.streaming.long_check import check_rows
+        from truefall.validate.streaming.rows import MemoryRows
+
+        result = check_rows(MemoryRows(trajectory), start)
+        if result is not None:
+            return result
     spec = start.spec
     budget = parse_budget(trajectory.metadata.get("budget", {}), spec.system, trajectory.path)
     orbit = exact_orbit(spec)
     inside = orbit.reachable(trajectory.time)
-    beyond, past = _beyond(spec, orbit, trajectory, inside, start.half_units)
+    beyond, past = beyond_end(spec, orbit, trajectory, inside, start.half_units)
     result = CheckResult(
         trajectory.path, trajectory.name, beyond, past, trajectory, spec, orbit,
         samples=len(trajectory), start_from=start.source,
@@ -226,20 +265,16 @@ def check_trajectory(
     if stored is not None:
         expected = stored_expected(stored, orbit, inside, bool(budget.per_revolution))
         certified = 0
-    elif len(kept) >= MANY_ROWS and (table := tabled_expected(orbit, kept.time)) is not None:
-        rough = _compare(kept, start, orbit, table)
-        rows = decisive_rows(rough, margins_of(rough, budget))
-        expected = replaced(table, rows, _expected(orbit, kept.time[rows]))
-        certified = rows.size
     else:
-        expected = _expected(orbit, kept.time)
-    comparison = _compare(kept, start, orbit, expected)
-    radius = _areal_radius(spec, expected)
-    floor, judged = floor_of(comparison, position_tolerance(comparison, budget, radius))
+        expected = exact_expected(orbit, kept.time)
+    comparison = compared(kept, start, orbit, expected)
+    floor, judged = floor_of(
+        comparison, position_tolerance(comparison, budget, radius_of(spec, expected))
+    )
     judgements = judgements_of(
         comparison, budget, judged, trajectory.path, spec.particle == "light"
     )
-    verdict, reason = _verdict(trajectory, start.source, spec, judgements, beyond, past)
+    verdict, reason = verdict_of(trajectory, len(trajectory), start, judgements, beyond, past)
     return replace(
         result,
         verdict=verdict,
@@ -257,7 +292,8 @@ def check_trajectory(
     )
 
 
-def _compare(kept: Trajectory, start: Start, orbit: Orbit, expected: Expected) -> Comparison:
+def compared(kept: Trajectory, start: Start, orbit: Orbit, expected: Expected) -> Comparison:
+    """The comparison of a trajectory with expected values at its stamps."""
     drifts = drifts_of(
         kept,
         energy_minus_one=orbit.energy_minus_one.value,
@@ -274,7 +310,8 @@ def _compare(kept: Trajectory, start: Start, orbit: Orbit, expected: Expected) -
     )
 
 
-def _areal_radius(spec: OrbitSpec, expected: Expected) -> Floats:
+def radius_of(spec: OrbitSpec, expected: Expected) -> Floats:
+    """Areal radius of the expected positions, (n,), in the file's length."""
     from truefall.reference.charts import areal_radius
     from truefall.reference.units import length_in
 
@@ -282,10 +319,10 @@ def _areal_radius(spec: OrbitSpec, expected: Expected) -> Floats:
     return areal_radius(spec.chart, np.linalg.norm(expected.position, axis=1) / length) * length
 
 
-def _verdict(
+def verdict_of(
     trajectory: Trajectory,
-    start_from: str,
-    spec: OrbitSpec,
+    samples: int,
+    start: Start,
     judgements: Sequence[Judgement],
     beyond: str,
     past: str,
@@ -294,15 +331,15 @@ def _verdict(
     verdict = overall(judgements)
     if past:
         return ("fail" if "fail" in (beyond, verdict) else "undecided"), past
-    alone = len(trajectory) == 1 and trajectory.time[0] == spec.start_time
-    if alone and (start_from == "first row" or verdict != "fail"):
+    alone = samples == 1 and trajectory.time[0] == start.spec.start_time
+    if alone and (start.source == "first row" or verdict != "fail"):
         return "not-judged", "the only row is the start itself"
     if verdict == "not-judged":
         return verdict, "no budget was given; errors are reported all the same"
     return verdict, ""
 
 
-def _beyond(
+def beyond_end(
     spec: OrbitSpec,
     orbit: Orbit,
     trajectory: Trajectory,

@@ -12,7 +12,7 @@ if TYPE_CHECKING:
     from truefall.reference.invariants import Invariants
     from truefall.validate.trajectory import Trajectory
 
-__all__ = ["Drift", "Drifts", "drifts_of"]
+__all__ = ["Drift", "Drifts", "drifts_of", "openness"]
 
 Floats = npt.NDArray[np.float64]
 _EPS = float(np.finfo(np.float64).eps)
@@ -75,7 +75,7 @@ def _invariants(trajectory: Trajectory, position: Floats, velocity: Floats) -> I
     )
 
 
-def _openness(trajectory: Trajectory, velocity: Floats) -> tuple[Floats, Floats, Floats]:
+def openness(trajectory: Trajectory, velocity: Floats) -> tuple[Floats, Floats, Floats]:
     """What half a unit of the states' digits does to E - 1, L and the norm, (n,) each.
 
     First order, by central differences in the six components.  Each counts with 2^-51 of its
@@ -130,7 +130,7 @@ def drifts_of(
         return Drifts()
     time = trajectory.time
     inv = _invariants(trajectory, trajectory.position, trajectory.velocity)
-    energy_open, momentum_open, norm_open = _openness(trajectory, trajectory.velocity)
+    energy_open, momentum_open, norm_open = openness(trajectory, trajectory.velocity)
     if start_open:
         energy_open = energy_open + energy_open[0]
         momentum_open = momentum_open + momentum_open[0]

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -13,7 +13,15 @@ from truefall.validate.compare import Comparison, Guard
 from truefall.validate.drift import Drift
 from truefall.validate.errors import InputError
 
-__all__ = ["Floor", "floor_of", "judgements_of", "margins_of", "position_tolerance"]
+__all__ = [
+    "Floor",
+    "floor_of",
+    "judgements_of",
+    "margins_of",
+    "position_tolerance",
+    "tightest",
+    "whole_file",
+]
 
 Floats = npt.NDArray[np.float64]
 _DEFAULT_SHARE = 0.01  # of r, for predictable_until without a position budget
@@ -35,11 +43,16 @@ class Floor:
 
 def position_tolerance(comparison: Comparison, budget: Budget, radius: Floats) -> Floats:
     """The tightest position tolerance at each row, (n,); 1 % of ``radius`` without a budget."""
+    return tightest(budget, comparison.revolutions, radius)
+
+
+def tightest(budget: Budget, revolutions: Floats, radius: Floats) -> Floats:
+    """The tightest position tolerance after so many revolutions, (n,), or 1 % of ``radius``."""
     limit = np.full(radius.size, np.inf)
     if "position" in budget.absolute:
         limit = np.full(radius.size, budget.absolute["position"])
     if "position" in budget.per_revolution:
-        growing = budget.per_revolution["position"] * np.maximum(comparison.revolutions, 1.0)
+        growing = budget.per_revolution["position"] * np.maximum(revolutions, 1.0)
         limit = np.minimum(limit, growing)
     return np.where(np.isfinite(limit), limit, _DEFAULT_SHARE * radius)
 
@@ -125,6 +138,47 @@ def judgements_of(
         limit = tolerance * np.maximum(comparison.revolutions, 1.0)
         judgement = _one(comparison, quantity, limit, series, judged, where, light)
         found.append(replace(judgement, quantity=f"per_revolution.{quantity}"))
+    return found
+
+
+def whole_file(
+    judgements: Sequence[Judgement],
+    rough: Sequence[Judgement],
+    counts: npt.NDArray[np.int64],
+    rows: npt.NDArray[np.int64],
+    total: int,
+) -> list[Judgement]:
+    """Judgements of some rows of a long file, told of all its rows.
+
+    Parameters
+    ----------
+    judgements, rough : sequence of Judgement
+        Of the rows in memory, by exact and by table values.
+    counts : (m, 3)
+        All rows by their outcome against the table: pass, open, fail; those not judged left out.
+    rows : (k,)
+        Numbers in the file of the rows in memory.
+    total : int
+        Rows compared.
+    """
+    found = []
+    for exact, table, (passes, open_, fails) in zip(
+        judgements, rough, counts.tolist(), strict=True
+    ):
+        unjudged = total - passes - open_ - fails
+        # rows in memory count by their exact outcome, all others by the table's
+        undecided = exact.undecided_rows - exact.unjudged_rows
+        undecided += max(0, open_ - (table.undecided_rows - table.unjudged_rows))
+        failing = exact.failing_rows + max(0, fails - table.failing_rows)
+        settled = undecided == 0 and unjudged == 0
+        outcome = "fail" if failing else "pass" if settled else "undecided"
+        found.append(
+            replace(
+                exact, outcome=outcome, row=int(rows[exact.row]),
+                undecided_rows=undecided + unjudged, failing_rows=failing,
+                unjudged_rows=unjudged,
+            )
+        )  # fmt: skip
     return found
 
 

@@ -21,27 +21,39 @@ if TYPE_CHECKING:
     from truefall.reference import Orbit
     from truefall.reference.table import Table
 
-__all__ = ["MANY_ROWS", "decisive_rows", "replaced", "tabled_expected"]
+__all__ = [
+    "MANY_ROWS",
+    "decisive_rows",
+    "replaced",
+    "table_azimuth",
+    "table_of",
+    "tabled_expected",
+]
 
 Floats = npt.NDArray[np.float64]
 
 #: From this many rows on a table pays, the compiler's start included.
 MANY_ROWS = 10_000
 _MOST_EXACT = 4000
-_RANDOM = 16
 
 
-def tabled_expected(orbit: Orbit, times: Floats) -> Expected | None:
-    """Expected values from a table of the orbit, or None where no table can be made."""
+def table_of(orbit: Orbit, first: float, last: float) -> Table | None:
+    """A table of the orbit between two times, or None where none can be made."""
     from truefall.reference.table import build_table
 
     try:
-        table = build_table(orbit, float(times.min()), float(times.max()))
-        position, velocity, clock = table.at(times)
+        table = build_table(orbit, min(first, last), max(first, last))
+        table.at(np.array([first, last]))
     except (ArithmeticError, RuntimeError):
         # no fit to float64, or no folder in which the compiler may keep its output: the exact
         # solution serves as well, only slower
         return None
+    return table
+
+
+def tabled_expected(orbit: Orbit, table: Table, times: Floats) -> Expected:
+    """Expected values from a table of the orbit."""
+    position, velocity, clock = table.at(times)
 
     def bound(vectors: Floats, share: float) -> Floats:
         size = np.linalg.norm(vectors, axis=1, keepdims=True)
@@ -50,7 +62,7 @@ def tabled_expected(orbit: Orbit, times: Floats) -> Expected | None:
     # the clock's error is measured against its interval's readings, at most twice the width
     width = float(np.max(np.diff(table.edges)))
     speeds = np.linalg.norm(velocity, axis=1)
-    fastest = np.maximum(speeds, 1e-3 * speeds.max())[:, None]
+    fastest = np.maximum(speeds, 1e-3 * table.fastest())[:, None]
     return Expected(
         position=position,
         position_low=np.zeros_like(position),
@@ -61,12 +73,12 @@ def tabled_expected(orbit: Orbit, times: Floats) -> Expected | None:
         clock=clock,
         clock_low=np.zeros_like(clock),
         clock_bound=float(table.error[2]) * (np.abs(clock) + 2 * width),
-        azimuth=_azimuth(orbit, table, times),
+        azimuth=table_azimuth(orbit, table, times),
         normal=orbit.angular_momentum_direction,
     )
 
 
-def _azimuth(orbit: Orbit, table: Table, times: Floats) -> Floats:
+def table_azimuth(orbit: Orbit, table: Table, times: Floats) -> Floats:
     """Azimuth since the start, good to a small part of a turn: for budgets per revolution.
 
     Linear between exact values at the table's edges, which are a third of a radian apart at
@@ -79,15 +91,17 @@ def _azimuth(orbit: Orbit, table: Table, times: Floats) -> Floats:
     length = float(table.period[0])
     if length == 0.0:
         return np.interp(elapsed, table.edges, at_edges)
-    swept = orbit.azimuth_per_radial_period
-    assert swept is not None
+    per_period = orbit.azimuth_per_radial_period
+    swept = 2 * np.pi if per_period is None else per_period.value  # a circle: one turn
     turns = np.floor((elapsed - table.edges[0]) / length)
-    total: Floats = turns * swept.value + np.interp(elapsed - turns * length, table.edges, at_edges)
+    total: Floats = turns * swept + np.interp(elapsed - turns * length, table.edges, at_edges)
     return total
 
 
 def decisive_rows(
-    comparison: Comparison, margins: Sequence[tuple[Floats, Floats]]
+    comparison: Comparison,
+    margins: Sequence[tuple[Floats, Floats]],
+    always: npt.NDArray[np.int64],
 ) -> npt.NDArray[np.int64]:
     """Rows to be computed exactly: the largest errors, what is undecided, and random ones.
 
@@ -95,15 +109,16 @@ def decisive_rows(
     ----------
     comparison : Comparison
         Against the table.
+    always : (k,)
+        Rows that are computed exactly in any case (the random ones).
     margins : sequence of (margin, guard) arrays
         Of each tolerance, (n,) each.  The rows closest to it, and those that the guard leaves
         undecided (a few thousand at most), are among the result.
     """
     n = comparison.time.size
-    rng = np.random.default_rng(n)
     errors = [comparison.distance, comparison.radial, comparison.along, comparison.cross]
     errors += [e for e in (comparison.velocity_error, comparison.clock_error) if e is not None]
-    rows = [rng.integers(0, n, _RANDOM), np.array([0, n - 1])]
+    rows = [always, np.array([0, n - 1])]
     rows += [np.array([int(np.argmax(np.abs(e)))]) for e in errors]
     for margin, guard in margins:
         open_ = np.flatnonzero(np.abs(margin) <= guard)

@@ -66,4 +66,6 @@ def test_revolutions_counted_by_the_table_are_those_of_the_orbit(exact_file):
     path, states = exact_file
     (result,) = check_file(path, budget={"per_revolution": {"position": 1e-12}})
 
-    assert np.abs(result.comparison.revolutions - np.abs(states.winding)).max() < 0.01
+    rows = result.totals.rows
+    assert rows.size > 4000
+    assert np.abs(result.comparison.revolutions - np.abs(states.winding[rows])).max() < 0.01

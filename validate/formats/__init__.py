@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
+from contextlib import ExitStack, contextmanager
 from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -12,10 +13,12 @@ from truefall.validate.errors import InputError
 if TYPE_CHECKING:
     from truefall.reference import Orbit, States
     from truefall.validate.orbit_file import OrbitSpec
+    from truefall.validate.streaming.rows import Rows
     from truefall.validate.trajectory import Trajectory
 
 __all__ = [
     "SUFFIXES",
+    "long_rows",
     "losses",
     "read_trajectories",
     "read_trajectory",
@@ -29,6 +32,10 @@ SUFFIXES = {
     ".csv": "csv", ".h5": "hdf5", ".hdf5": "hdf5", ".npz": "npz", ".parquet": "parquet",
     ".oem": "oem",
 }  # fmt: skip
+
+
+#: Files below this size are read into memory as a whole.
+_LONG_BYTES = 1 << 20
 
 
 def suffix_of(path: str | Path) -> str:
@@ -91,23 +98,75 @@ def read_trajectories(
         If the file cannot be used or metadata are missing; a wrong key or value names the file
         that it stands in.
     """
-    from truefall.validate.orbit_file import check_layer, merge, parse_orbit
-
     path = Path(path)
+    before = _layers_before(overrides, orbit_file)
+    raw = _read_raw(path)
+    found = []
+    for own, trajectory in raw:
+        merged = _complete(path, before, own, need_metadata)
+        found.append(replace(trajectory, metadata=merged))
+    return found
+
+
+def _layers_before(
+    overrides: Mapping[str, Any] | None, orbit_file: str | Path | None
+) -> list[dict[str, Any]]:
+    """What wins over the file's own metadata."""
     before = [dict(overrides or {})]
     if orbit_file is not None:
         before.append(_layer(Path(orbit_file)))
+    return before
+
+
+def _complete(
+    path: Path, before: list[dict[str, Any]], own: dict[str, Any], need_metadata: bool = True
+) -> dict[str, Any]:
+    """Metadata of a trajectory, from all layers."""
+    from truefall.validate.orbit_file import check_layer, merge, parse_orbit
+
     sidecar = path.with_suffix(".toml")
-    raw = _read_raw(path)
     after = [_layer(sidecar)] if sidecar.is_file() else []
-    found = []
-    for own, trajectory in raw:
-        check_layer(own, path)
-        merged = merge(*before, own, *after)
-        if need_metadata:
-            parse_orbit(merged, path, need_start=False)
-        found.append(replace(trajectory, metadata=merged))
-    return found
+    check_layer(own, path)
+    merged = merge(*before, own, *after)
+    if need_metadata:
+        parse_orbit(merged, path, need_start=False)
+    return merged
+
+
+@contextmanager
+def long_rows(
+    path: str | Path,
+    *,
+    overrides: Mapping[str, Any] | None = None,
+    orbit_file: str | Path | None = None,
+) -> Iterator[list[Rows]]:
+    """The trajectories of a long file, to be read block by block; none for a short file.
+
+    Raises
+    ------
+    InputError
+        As :func:`read_trajectories`.
+    """
+    from truefall.validate.formats.files import check_readable
+
+    path = Path(path)
+    kind = suffix_of(path)
+    check_readable(path)
+    if path.stat().st_size < _LONG_BYTES or kind not in ("hdf5", "csv"):
+        yield []
+        return
+    before = _layers_before(overrides, orbit_file)
+
+    def complete(own: dict[str, Any]) -> dict[str, Any]:
+        return _complete(path, before, own)
+
+    with ExitStack() as stack:
+        found: list[Rows] = []
+        if kind == "hdf5":
+            from truefall.validate.streaming.hdf5_rows import open_rows
+
+            found += [stack.enter_context(rows) for rows in open_rows(path, complete)]
+        yield found
 
 
 def read_trajectory(

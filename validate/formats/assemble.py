@@ -22,7 +22,14 @@ from truefall.validate.trajectory import (
     Trajectory,
 )
 
-__all__ = ["arrays_of", "check_columns", "columns_of", "make_trajectory", "single_precision"]
+__all__ = [
+    "arrays_of",
+    "check_columns",
+    "check_shapes",
+    "columns_of",
+    "make_trajectory",
+    "single_precision",
+]
 
 _LONGEST_NAME = 60
 
@@ -106,6 +113,19 @@ def _finite(name: str, values: Floats, where: str | Path) -> None:
         )
 
 
+def check_shapes(shapes: Mapping[str, tuple[int, ...]], path: str | Path) -> None:
+    """Refuse series without rows, or whose shapes do not go with that of ``time``."""
+    n = int(np.prod(shapes["time"], dtype=np.int64))
+    if n == 0:
+        raise InputError("holds no rows", path)
+    for key in (k for k in SERIES if k in shapes):
+        shape = (n, 3) if key in VECTORS else (n,)
+        if shapes[key] != shape:
+            raise InputError(
+                f"{key} has shape {shapes[key]}; time has {n} entries, so it must be {shape}", path
+            )
+
+
 def _quantisation(quanta: Mapping[str, Floats]) -> Quantisation:
     return Quantisation(
         time=float(quanta["time"].max()),
@@ -137,16 +157,8 @@ def make_trajectory(
     InputError
         Naming the array and row at fault.
     """
-    n = int(arrays["time"].size)
-    if n == 0:
-        raise InputError("holds no rows", path)
+    check_shapes({key: array.shape for key, array in arrays.items()}, path)
     for key in (k for k in SERIES if k in arrays):
-        shape = (n, 3) if key in VECTORS else (n,)
-        if arrays[key].shape != shape:
-            raise InputError(
-                f"{key} has shape {arrays[key].shape}; time has {n} entries, so it must be {shape}",
-                path,
-            )
         _finite(key, arrays[key], path)
     check_times(arrays["time"].tolist(), str(path), "time")
     return Trajectory(

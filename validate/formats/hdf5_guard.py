@@ -12,6 +12,7 @@ from __future__ import annotations
 
 import os
 import zlib
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
@@ -20,7 +21,7 @@ import numpy.typing as npt
 
 from truefall.validate.errors import InputError
 
-__all__ = ["GuardedFile"]
+__all__ = ["GuardedFile", "Layout"]
 
 _MAX_BYTES = 1 << 32
 _MAX_CHUNK = 64 << 20
@@ -31,6 +32,33 @@ _MAX_OBJECTS = 10_000
 _DEFLATE, _SHUFFLE, _FLETCHER32 = 1, 2, 3
 _FILTERS = {_SHUFFLE: "shuffle", _DEFLATE: "deflate", _FLETCHER32: "fletcher32"}
 _CHECKSUM_BYTES = 4
+
+
+@dataclass(frozen=True)
+class Layout:
+    """Where the numbers of a dataset lie in the file.
+
+    Attributes
+    ----------
+    rows : int or None
+        Rows in a chunk; None for a contiguous dataset, which starts at byte ``start``.
+    filters : tuple of str
+        In the order in which they were applied.
+    places : (k, 3) int64
+        Byte offset, stored size and filter mask of each chunk, by the order of their rows.
+    plain : bool
+        Whether the numbers can be read from these places alone: whole rows in every chunk, no
+        filter left out, the file's addresses counted from its first byte.
+    """
+
+    name: str
+    shape: tuple[int, ...]
+    dtype: np.dtype[Any]
+    rows: int | None
+    filters: tuple[str, ...]
+    places: npt.NDArray[np.int64]
+    start: int | None
+    plain: bool
 
 
 class GuardedFile:
@@ -131,7 +159,54 @@ class GuardedFile:
             ) from None
         return values
 
-    def _check_dataset(self, dataset: Any) -> None:
+    def layout(self, parent: Any, name: str) -> Layout | None:
+        """Where the numbers of a member dataset lie in the file, or None if there is none.
+
+        Raises
+        ------
+        InputError
+            If it is anything else than plain numbers, or not wholly written.  Compressed streams
+            are not looked into: who reads them inflates them within bounds.
+        """
+        dataset = self._member(parent, name)
+        if dataset is None:
+            return None
+        if not isinstance(dataset, self._h5py.Dataset):
+            raise self._refuse(f"{parent.name}/{name} is not a dataset")
+        try:
+            self._check_dataset(dataset, streams=False)
+            return self._layout(dataset)
+        except (OSError, RuntimeError, ValueError) as error:
+            raise self._refuse(
+                f"{dataset.name} is damaged ({str(error).splitlines()[0][:80]})"
+            ) from None
+
+    def _layout(self, dataset: Any) -> Layout:
+        properties = dataset.id.get_create_plist()
+        codes = [properties.get_filter(k)[0] for k in range(properties.get_nfilters())]
+        filters = tuple(_FILTERS[code] for code in codes)
+        plain = self._file.userblock_size == 0
+        if dataset.chunks is None:
+            start = dataset.id.get_offset()
+            places = np.zeros((0, 3), dtype=np.int64)
+            return Layout(dataset.name, dataset.shape, dataset.dtype, None, filters, places, start,
+                          plain and start is not None)  # fmt: skip
+        rows = dataset.chunks[0]
+        plain = plain and dataset.chunks[1:] == dataset.shape[1:]
+        places = np.zeros((-(-dataset.shape[0] // rows), 3), dtype=np.int64)
+
+        def note(info: Any) -> None:
+            k = info.chunk_offset[0] // rows
+            places[k] = info.byte_offset, info.size, info.filter_mask
+
+        if plain:
+            dataset.id.chunk_iter(note)
+            plain = bool(np.all(places[:, 1] > 0) and not places[:, 2].any())
+        return Layout(
+            dataset.name, dataset.shape, dataset.dtype, rows, filters, places, None, plain
+        )
+
+    def _check_dataset(self, dataset: Any, streams: bool = True) -> None:
         h5t, label = self._h5py.h5t, dataset.name
         kind = dataset.id.get_type()
         plain = (h5t.IEEE_F64LE, h5t.IEEE_F64BE, h5t.IEEE_F32LE, h5t.IEEE_F32BE)
@@ -160,9 +235,9 @@ class GuardedFile:
             raise self._refuse(
                 f"{label} uses filters out of order; the order is {', '.join(_FILTERS.values())}",
             )
-        self._check_storage(dataset, filters)
+        self._check_storage(dataset, filters, streams)
 
-    def _check_storage(self, dataset: Any, filters: list[int]) -> None:
+    def _check_storage(self, dataset: Any, filters: list[int], streams: bool) -> None:
         label = dataset.name
         if dataset.chunks is None:
             if dataset.id.get_storage_size() != dataset.nbytes:
@@ -178,7 +253,7 @@ class GuardedFile:
             raise self._refuse(f"{label} has more than {_MAX_CHUNKS} chunks")
         if dataset.id.get_num_chunks() != wanted:
             raise self._refuse(f"{label} was only partly written")
-        for k in range(wanted):
+        for k in range(wanted if streams else 0):
             info = dataset.id.get_chunk_info(k)
             if info.size > chunk + chunk // 64 + 256:
                 raise self._refuse(f"{label} has an oversized compressed chunk")

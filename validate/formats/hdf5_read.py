@@ -15,7 +15,7 @@ from truefall.validate.formats.hdf5_guard import GuardedFile
 from truefall.validate.formats.metadata import ELEMENT_KEYS, unflatten
 from truefall.validate.trajectory import SERIES, StoredReference, Trajectory
 
-__all__ = ["read_all"]
+__all__ = ["declared", "read_all", "trajectory_groups"]
 
 _ATTRIBUTES = (
     "name", "system", "gm", "particle", "chart", "clock", "orbit_class", "ends_at", "end_reason",
@@ -26,7 +26,8 @@ _ATTRIBUTES = (
 Floats = npt.NDArray[np.float64]
 
 
-def _metadata(file: GuardedFile, group: Any, name: str) -> dict[str, Any]:
+def declared(file: GuardedFile, group: Any, name: str) -> dict[str, Any]:
+    """The metadata in a group's attributes."""
     try:
         found = unflatten(file.attributes(group, _ATTRIBUTES))
     except tomllib.TOMLDecodeError as error:
@@ -89,7 +90,7 @@ def _trajectory(file: GuardedFile, group: Any, name: str) -> tuple[dict[str, Any
     quanta = {key: single_precision(key, values) for key, values in there.items()}
     stored = _words(file, group, arrays)
     invariants = _invariants(file, group)
-    metadata = _metadata(file, group, name)
+    metadata = declared(file, group, name)
     reference = StoredReference(stored, invariants) if stored or invariants else None
     return metadata, make_trajectory(file.path, name, arrays, quanta, metadata, reference)
 
@@ -114,6 +115,17 @@ def read_all(path: str | Path) -> list[tuple[dict[str, Any], Trajectory]]:
 
 
 def _groups(file: GuardedFile) -> list[tuple[dict[str, Any], Trajectory]]:
+    return [_trajectory(file, group, name) for name, group in trajectory_groups(file)]
+
+
+def trajectory_groups(file: GuardedFile) -> list[tuple[str, Any]]:
+    """Name and group of every trajectory.
+
+    Raises
+    ------
+    InputError
+        If the layout is another.
+    """
     holder = file.group(file.root, "trajectory")
     if holder is None:
         raise InputError(
@@ -126,5 +138,5 @@ def _groups(file: GuardedFile) -> list[tuple[dict[str, Any], Trajectory]]:
         group = file.group(holder, name)
         if group is None:
             raise InputError(f"/trajectory/{name} is not a group", file.path)
-        found.append(_trajectory(file, group, name))
+        found.append((name, group))
     return found

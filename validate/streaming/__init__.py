@@ -1,0 +1,1 @@
+"""Long files: every row is screened in passing, and the rows that decide are judged exactly."""
