@@ -1,84 +1,115 @@
-"""Fixed-step methods; each advances ``y`` by one step of ``dy/dT = rate(y)``."""
+"""What a method is: facts for people, and the parts the run loop is compiled around."""
 
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
 
-__all__ = ["METHODS", "Method", "gauss_legendre_tableau"]
+__all__ = ["Method", "Parts", "Problem"]
 
-Floats = npt.NDArray[np.float64]
-Rate = Callable[[Floats], Floats]
-Step = Callable[[Rate, Floats, float], tuple[Floats, int]]
 
-_ITERATIONS = 100
-#: Relative change below which a stage's rounding, not its convergence, is seen.
-_SETTLED = 1e-13
+@dataclass(frozen=True)
+class Problem:
+    """What a method is asked to do.
+
+    Attributes
+    ----------
+    kind, variable, size : int
+        Numbers of the equations and of the independent variable; length of the state.
+    order : int
+        Order asked for, or the method's default.
+    adaptive : bool
+        Whether the step is left to the method.
+    """
+
+    kind: int
+    variable: int
+    size: int
+    order: int
+    adaptive: bool
+
+
+@dataclass(frozen=True)
+class Parts:
+    """A method made ready for a problem.
+
+    Attributes
+    ----------
+    name : str
+        Of the step kernel: copies of the loop are compiled and kept by it.
+    step : kernel
+        ``step(kind, variable, par, code, table, tolerance, y, h, memory, change) ->
+        (error, evaluations, taken)``: fills ``change`` with y(sigma + taken) - y.  ``error`` is
+        the estimated error over the tolerance (0 for fixed steps, not finite if the step
+        failed), ``taken`` is h unless the method chooses its step itself.
+    memory : (int, int)
+        Shape of the array that the step may keep to itself; zeros at the start.
+    code : (a, b) int64
+    table : (a, b) float64
+        The method's integers and coefficients, as it likes.
+    keeps : bool
+        Whether the memory lasts from step to step.
+    exponent : float
+        Of the step control: next step = step * error ** -exponent.
+    dense : kernel, optional
+        Fills the change inside a step; without it shorter steps are taken.
+    chooses : bool
+        Whether the step finds its own length (an infinite one is proposed first).
+    """
+
+    name: str
+    step: Any
+    memory: tuple[int, int]
+    code: npt.NDArray[np.int64] = field(default_factory=lambda: np.zeros((1, 1), np.int64))
+    table: npt.NDArray[np.float64] = field(default_factory=lambda: np.zeros((1, 1)))
+    keeps: bool = False
+    exponent: float = 0.2
+    dense: Any = None
+    chooses: bool = False
 
 
 @dataclass(frozen=True)
 class Method:
-    """A method: its order, and a step that returns the change of ``y`` and the evaluations."""
+    """A method as the index knows it.
 
-    order: int
-    step: Step
-
-
-def _classical(rate: Rate, y: Floats, h: float) -> tuple[Floats, int]:
-    """The classical fourth-order Runge-Kutta method (Kutta 1901)."""
-    k1 = rate(y)
-    k2 = rate(y + 0.5 * h * k1)
-    k3 = rate(y + 0.5 * h * k2)
-    k4 = rate(y + h * k3)
-    return h / 6 * (k1 + 2 * k2 + 2 * k3 + k4), 4
-
-
-def gauss_legendre_tableau(stages: int) -> tuple[Floats, Floats, Floats]:
-    """Nodes c, weights b and matrix a of the collocation method at Legendre's roots.
-
-    Order ``2 stages``, symplectic (Hairer, Lubich & Wanner, Geometric Numerical Integration,
-    II.1, from memory): ``sum_j a_ij c_j^(k-1) = c_i^k / k`` for k = 1 ... stages.
+    Attributes
+    ----------
+    name : str
+    order : int or None
+        None where the order is free; then ``orders`` are allowed and ``default_order`` is taken.
+    family : {"explicit", "adaptive", "implicit", "symplectic"}
+    adaptive, symplectic : bool
+        Whether it can choose its steps; whether it keeps the symplectic form.
+    source : str
+        Where the method comes from.
+    parts : callable
+        From a :class:`Problem` to :class:`Parts`; imports the kernels when called.
+    equations : tuple of str
+        Names it applies to; empty for all.
+    variables : tuple of str
+        Independent variables it applies to; empty for all.
+    arithmetics : tuple of str
+    orders : range
+        Orders allowed where ``order`` is None.
+    default_order : int
+    fixed : bool
+        Whether it can be run at a given step.
     """
-    roots, weights = np.polynomial.legendre.leggauss(stages)
-    c = 0.5 * (roots + 1)
-    powers = np.vander(c, stages, increasing=True)
-    k = np.arange(1, stages + 1)
-    a = (c[:, None] ** k / k) @ np.linalg.inv(powers)
-    return c, 0.5 * weights, a
 
-
-def _gauss_legendre(stages: int) -> Step:
-    _, b, a = gauss_legendre_tableau(stages)
-
-    def step(rate: Rate, y: Floats, h: float) -> tuple[Floats, int]:
-        """Fixed-point iteration until the stages stop changing, to round-off.
-
-        Raises ArithmeticError if they do not: the step is too long for the iteration.
-        """
-        k = np.tile(rate(y), (stages, 1))
-        count, last = 1, np.inf
-        for _ in range(_ITERATIONS):
-            new = np.array([rate(y + h * (row @ k)) for row in a])
-            count += stages
-            change = float(np.abs(new - k).max())
-            k = new
-            settled = change <= _SETTLED * float(np.abs(k).max())
-            if change == 0.0 or (settled and change >= last):
-                return h * (b @ k), count
-            last = change
-        raise ArithmeticError(f"the stages of a step of {h!r} do not settle; take shorter steps")
-
-    return step
-
-
-#: Name to method; one line adds a method.
-METHODS = {
-    "runge-kutta-4": Method(4, _classical),
-    "gauss-legendre-2": Method(2, _gauss_legendre(1)),
-    "gauss-legendre-4": Method(4, _gauss_legendre(2)),
-    "gauss-legendre-6": Method(6, _gauss_legendre(3)),
-    "gauss-legendre-8": Method(8, _gauss_legendre(4)),
-}
+    name: str
+    order: int | None
+    family: str
+    adaptive: bool
+    symplectic: bool
+    source: str
+    parts: Callable[[Problem], Parts]
+    equations: tuple[str, ...] = ()
+    variables: tuple[str, ...] = ()
+    arithmetics: tuple[str, ...] = ("float64", "compensated")
+    orders: range = range(0)
+    default_order: int = 0
+    fixed: bool = True

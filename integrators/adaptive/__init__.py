@@ -1,0 +1,1 @@
+"""Methods that choose their steps."""

@@ -1,0 +1,1 @@
+"""Collocation methods whose stages are found by iteration."""
