@@ -31,7 +31,7 @@ _ANGLES = 64
 _NARROW = 2.0**10
 #: Largest error of the fit, in units of eps times the vector's size, before an interval splits:
 #: position, velocity, clock.
-_GOAL = np.array([0.5, 1.0, 1.0])
+_GOAL = np.array([0.5, 1.5, 1.0])
 _EPS = float(np.finfo(np.float64).eps)
 #: Largest change over an interval, relative to the size: keeps Horner's rounding small.
 _SPREAD = 0.25
@@ -92,6 +92,10 @@ class Table:
     def fastest(self) -> float:
         """Largest speed at the middle of a piece: the measure where a speed passes zero."""
         return float(np.linalg.norm(self.coefficients[:, 0, 2:4], axis=1).max())
+
+    def clock_width(self) -> float:
+        """Largest change of the second clock over a piece, against which its error counts."""
+        return float(2 * np.abs(self.coefficients[:, 1:-1, 4]).sum(axis=1).max())
 
     def fill(self, times: Floats, position: Floats, velocity: Floats, clock: Floats) -> None:
         """As :meth:`at`, into arrays (n, 3), (n, 3), (n,) at hand; times are not checked.

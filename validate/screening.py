@@ -59,8 +59,8 @@ def tabled_expected(orbit: Orbit, table: Table, times: Floats) -> Expected:
         size = np.linalg.norm(vectors, axis=1, keepdims=True)
         return np.broadcast_to(size * share, vectors.shape)
 
-    # the clock's error is measured against its interval's readings, at most twice the width
-    width = float(np.max(np.diff(table.edges)))
+    # the clock's error is measured against its piece's readings, at most twice the width off
+    width = table.clock_width()
     speeds = np.linalg.norm(velocity, axis=1)
     fastest = np.maximum(speeds, 1e-3 * table.fastest())[:, None]
     return Expected(

@@ -56,23 +56,10 @@ def plan_of(
     """
 
     spec = start.spec
-    length = length_in(spec.system, spec.gm)
-    c = float(SYSTEM[spec.system].c_exact)
-    normal = np.asarray(orbit.angular_momentum_direction)
-    axes = normal
-    if not np.any(normal):
-        radial = np.asarray(orbit.position) / np.linalg.norm(orbit.position)
-        other = np.array([0.0, 0.0, 1.0]) if abs(radial[2]) < 0.9 else np.eye(3)[0]
-        axes = other - radial * float(radial @ other)
-        axes = axes / np.linalg.norm(axes)
+    usable = _usable(rows, spec.clock, spec.particle)
     tolerances = [(_KINDS[q], t, 0) for q, t in budget.absolute.items()]
     tolerances += [(_KINDS[q], t, 1) for q, t in budget.per_revolution.items()]
-    usable = _usable(rows, spec.clock, spec.particle)
     tolerances = [t for t in tolerances if t[0] in usable]
-    width = float(np.max(np.diff(table.edges)))
-    span = abs(ends[1] - ends[0])
-    root = float(np.sqrt(3.0))
-    speed = table.fastest()
     turns = None
     if any(grows for _, _, grows in tolerances):
 
@@ -87,41 +74,14 @@ def plan_of(
             return np.array([np.interp(times, grid, row) for row in open_by])
 
         judged = _judged(grid, open_by[0], start, orbit, table, budget)
-    unit = length if orbit.particle == "light" else length * c
-    loose = np.zeros(2)
-    if start.is_open and "velocity" in rows.head.series:
-        head = first_row(rows)
-        assert head.velocity is not None
-        energy_open, momentum_open, _ = openness(head, head.velocity)
-        loose = np.array([energy_open[0], momentum_open[0] / unit])
     return Plan(
         table=table,
         clock=second_clock_name(rows, spec.clock, spec.particle),
-        shares=np.array(
-            [
-                table.error[0] * root,
-                table.error[1] * root,
-                1e-3 * speed,
-                table.error[2],
-                2 * width,
-                1.0 / span if span > 0 else 1.0,
-            ]
-        ),
+        shares=_shares(table, abs(ends[1] - ends[0])),
         tolerances=np.array([t for _, t, _ in tolerances], np.float64),
         kinds=np.array([k for k, _, _ in tolerances], np.int64),
         growing=np.array([g for _, _, g in tolerances], np.int64),
-        orbit=np.array(
-            [
-                length,
-                c,
-                orbit.energy_minus_one.value,
-                orbit.angular_momentum.value / unit,
-                *normal,
-                *axes,
-                *loose,
-                0.5 * (ends[0] + ends[1]),
-            ]
-        ),
+        orbit=_constants(rows, start, orbit, 0.5 * (ends[0] + ends[1])),
         chart=CHART_NUMBER[spec.chart],
         light=spec.particle == "light",
         spread=spread,
@@ -129,6 +89,38 @@ def plan_of(
         turns=turns,
         always=always,
     )
+
+
+def _shares(table: Table, span: float) -> Floats:
+    """The table's bounds as the kernel takes them, and 1 by the span of the times."""
+    root = float(np.sqrt(3.0))  # a bound for every component, and the length of three of them
+    position, velocity, clock = (float(e) for e in table.error)
+    slowest, width = 1e-3 * table.fastest(), 2 * table.clock_width()
+    inverse = 1.0 / span if span > 0 else 1.0
+    return np.array([position * root, velocity * root, slowest, clock, width, inverse])
+
+
+def _constants(rows: Rows, start: Start, orbit: Orbit, middle: float) -> Floats:
+    """The orbit's units and constants as the kernel takes them."""
+    spec = start.spec
+    length = length_in(spec.system, spec.gm)
+    c = float(SYSTEM[spec.system].c_exact)
+    normal = np.asarray(orbit.angular_momentum_direction)
+    axes = normal
+    if not np.any(normal):  # radial motion has no plane: the one nearest to the x-y plane will do
+        radial = np.asarray(orbit.position) / np.linalg.norm(orbit.position)
+        other = np.array([0.0, 0.0, 1.0]) if abs(radial[2]) < 0.9 else np.eye(3)[0]
+        axes = other - radial * float(radial @ other)
+        axes = axes / np.linalg.norm(axes)
+    unit = length if orbit.particle == "light" else length * c
+    loose = np.zeros(2)
+    if start.is_open and "velocity" in rows.head.series:
+        head = first_row(rows)
+        assert head.velocity is not None
+        energy_open, momentum_open, _ = openness(head, head.velocity)
+        loose = np.array([energy_open[0], momentum_open[0] / unit])
+    excess, momentum = orbit.energy_minus_one.value, orbit.angular_momentum.value / unit
+    return np.array([length, c, excess, momentum, *normal, *axes, *loose, middle])
 
 
 def _usable(rows: Rows, clock: str, particle: str) -> set[int]:

@@ -155,8 +155,8 @@ class _Reducer:
             self._extra(time, x, v, c), _digits(block, self.rows.head.clock_quantum, n),
             np.ones(1, np.bool_) if plan.judged is None else plan.judged(time),
             np.ones(1) if plan.turns is None else plan.turns(time),
-            plan.tolerances, plan.kinds, plan.growing, plan.orbit, plan.chart, plan.light, scratch[3], scratch[4],
-            found.largest, found.where, found.laws, found.counts, marks, open_rows, open_margins,
+            plan.tolerances, plan.kinds, plan.growing, plan.orbit, plan.chart, plan.light,
+            scratch[3], scratch[4], found.largest, found.where, found.laws, found.counts, marks, open_rows, open_margins,
         )  # fmt: skip
         inside = self.kept[
             np.searchsorted(self.kept, first) : np.searchsorted(self.kept, first + n)
