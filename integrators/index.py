@@ -87,6 +87,27 @@ def _gauss_legendre(problem: Problem) -> Parts:
     return parts(problem)
 
 
+def _gauss_radau(problem: Problem) -> Parts:
+    from truefall.integrators.adaptive.gauss_radau import parts
+
+    return parts(problem)
+
+
+def _extrapolation(problem: Problem) -> Parts:
+    from truefall.integrators.adaptive.extrapolation import parts
+
+    return parts(problem)
+
+
+def _runge_kutta(name: str, order: int, family: str, source: str) -> Method:
+    def parts(problem: Problem) -> Parts:
+        from truefall.integrators.adaptive.runge_kutta import parts_of
+
+        return parts_of(name, problem)
+
+    return Method(name, order, family, family == "adaptive", False, source, parts)
+
+
 def _gauss(order: int) -> Method:
     source = "Hairer, Lubich & Wanner, Geometric Numerical Integration, II.1"
     return Method(
@@ -101,6 +122,29 @@ METHODS: Mapping[str, Method] = {
             "taylor", None, "adaptive", True, False, "Jorba & Zou 2005, Exp. Math. 14, 99",
             _taylor, orders=range(2, 101), default_order=24,
             ),
+        _runge_kutta("runge-kutta-4", 4, "explicit", "Kutta 1901, Z. Math. Phys. 46, 435"),
+        _runge_kutta(
+            "dormand-prince-5", 5, "adaptive",
+            "Dormand & Prince 1980, J. Comput. Appl. Math. 6, 19",
+        ),
+        _runge_kutta(
+            "dormand-prince-8", 8, "adaptive",
+            "Hairer, Norsett & Wanner, Solving Ordinary Differential Equations I, II.5, II.10",
+        ),
+        _runge_kutta(
+            "prince-9", 9, "adaptive",
+            "Prince 2018, Parallel derivation of efficient continuous/discrete explicit "
+            "Runge-Kutta methods",
+        ),
+        Method(
+            "gragg-bulirsch-stoer", None, "adaptive", True, False,
+            "Bulirsch & Stoer 1966, Numer. Math. 8, 1", _extrapolation,
+            orders=range(4, 25, 2), default_order=12,
+        ),
+        Method(
+            "gauss-radau-15", 15, "adaptive", True, False,
+            "Everhart 1985; Rein & Spiegel 2015, MNRAS 446, 1424", _gauss_radau,
+        ),
         *(_gauss(order) for order in range(2, 17, 2)),
     )
 }  # fmt: skip
