@@ -165,7 +165,12 @@ def long_rows(
         if kind == "hdf5":
             from truefall.validate.streaming.hdf5_rows import open_rows
 
-            found += [stack.enter_context(rows) for rows in open_rows(path, complete)]
+            found += [stack.enter_context(part) for part in open_rows(path, complete)]
+        else:
+            from truefall.validate.streaming.csv_rows import open_csv
+
+            rows = open_csv(path, complete)
+            found += [] if rows is None else [rows]
         yield found
 
 

@@ -19,9 +19,11 @@ from truefall.validate.formats.metadata import dump_toml
 from truefall.validate.formats.text_digits import NUMBER, file_quanta
 from truefall.validate.trajectory import Trajectory
 
-__all__ = ["read", "read_times", "write_rows"]
+__all__ = ["leading_lines", "read", "read_times", "write_rows"]
 
 _LIMIT = 1 << 31
+_MOST_LINES = 1000
+_LONGEST_LINE = 1 << 16
 _KEY_LINE = re.compile(r"#\s*([A-Za-z_][\w-]*(?:\.[\w-]+)*)\s*=", re.ASCII)
 _FORTRAN = re.compile(r"[+-]?[0-9]*\.?[0-9]*[dDqQ][+-]?[0-9]+")
 _DECIMAL_COMMA = re.compile(r"[+-]?[0-9]+,[0-9]+(?:[eE][+-]?[0-9]+)?")
@@ -66,6 +68,36 @@ def _metadata(lines: list[tuple[int, str]], path: Path) -> dict[str, Any]:
         (lines[-1][0], keys[-1]),
     )
     raise InputError(f"line {number} gives {again} a second time", path)
+
+
+def leading_lines(path: Path) -> tuple[dict[str, Any], list[str], int] | None:
+    """Metadata, column names, and the byte at which the rows begin; None for an unusual start.
+
+    Raises
+    ------
+    InputError
+        For metadata that are not TOML.
+    """
+    assignments: list[tuple[int, str]] = []
+    place = 0
+    with path.open("rb") as file:
+        for number, raw in enumerate(file, start=1):
+            if number > _MOST_LINES or len(raw) > _LONGEST_LINE or not raw.endswith(b"\n"):
+                return None
+            place += len(raw)
+            try:
+                line = raw.decode("utf-8-sig" if number == 1 else "utf-8").strip("\r\n")
+            except UnicodeDecodeError:
+                return None
+            if line.startswith("#"):
+                if _KEY_LINE.match(line):
+                    assignments.append((number, line))
+            elif line.strip():
+                if '"' in line:
+                    return None
+                names = [name.strip() for name in line.split(",")]
+                return _metadata(assignments, path) if assignments else {}, names, place
+    return None
 
 
 def _split(path: Path) -> tuple[dict[str, Any], list[str], list[list[str]], int]:

@@ -32,12 +32,12 @@ from itertools import pairwise
 import numpy as np
 import numpy.typing as npt
 
-__all__ = ["NUMBER", "file_quanta"]
+__all__ = ["FEW_VALUES", "NUMBER", "TELLING_DIGITS", "file_quanta", "is_shortest"]
 
 #: An ASCII decimal number: no underscores, no hexadecimal, no nan or inf.
 NUMBER = re.compile(r"[+-]?(?:[0-9]+\.?[0-9]*|\.[0-9]+)(?:[eE][+-]?[0-9]{1,9})?")
-_TELLING_DIGITS = 17
-_FEW_VALUES = 3
+TELLING_DIGITS = 17
+FEW_VALUES = 3
 _CLOCKS = frozenset({"time", "proper_time", "coordinate_time", "affine"})
 _SHORT_STEP_DIGITS = 3
 _LONG_GRID = 20
@@ -65,14 +65,16 @@ def _padded(text: str) -> bool:
     return len(fraction) > 1 and fraction.endswith("0")
 
 
-def _in_shortest_form(texts: Sequence[str], values: Floats) -> bool:
-    for text, value in zip(texts, values.tolist(), strict=True):
-        shortest = repr(value)
-        if text != shortest and (
-            _padded(text) or len(_significant(text)) > len(_significant(shortest))
-        ):
-            return False
-    return True
+def is_shortest(text: str) -> bool:
+    """Whether a text has no more digits than its float64 needs to be told from all others."""
+    shortest = repr(float(text))
+    return text == shortest or not (
+        _padded(text) or len(_significant(text)) > len(_significant(shortest))
+    )
+
+
+def _in_shortest_form(texts: Sequence[str]) -> bool:
+    return all(map(is_shortest, texts))
 
 
 def _most_digits(texts: Sequence[str]) -> int:
@@ -137,21 +139,21 @@ def file_quanta(
     dict of column name to (n,) float64
         In the column's own unit.
     """
-    shortest = {name: _in_shortest_form(texts[name], values[name]) for name in texts}
+    shortest = {name: _in_shortest_form(texts[name]) for name in texts}
     most = {name: _most_digits(texts[name]) if shortest[name] else 0 for name in texts}
     others = [name for name in texts if name != "time"]
     vouched = all(shortest[name] for name in others) and any(
-        most[name] >= _TELLING_DIGITS for name in others
+        most[name] >= TELLING_DIGITS for name in others
     )
 
     def exact(name: str, column: Sequence[str]) -> bool:
-        if shortest[name] and most[name] >= _TELLING_DIGITS:
+        if shortest[name] and most[name] >= TELLING_DIGITS:
             return True
         if shortest[name] and vouched:
             return (
                 name in _CLOCKS
-                or most[name] >= _TELLING_DIGITS - 1
-                or len(set(column)) <= _FEW_VALUES
+                or most[name] >= TELLING_DIGITS - 1
+                or len(set(column)) <= FEW_VALUES
             )
         if name == "time" and _exact_stamps(column, values[name]):
             return True

@@ -16,7 +16,7 @@ if TYPE_CHECKING:
     from truefall.validate.check import CheckResult
     from truefall.validate.drift import Drift
 
-__all__ = ["document", "error_summary", "file_object"]
+__all__ = ["document", "error_summary", "file_object", "summary_of"]
 
 Floats = npt.NDArray[np.float64]
 
@@ -50,6 +50,15 @@ def error_summary(values: Floats | None, time: Floats) -> dict[str, float] | Non
     # scaled, so that squares of tiny or huge errors neither vanish nor overflow
     rms = largest * float(np.sqrt(np.mean((size / largest) ** 2))) if largest > 0 else 0.0
     return {"max": largest, "rms": rms, "at_time": float(time[worst])}
+
+
+def summary_of(result: CheckResult, quantity: str, values: Floats | None) -> dict[str, float] | None:
+    """:func:`error_summary` of one quantity; of all rows, also where only some are in memory."""
+    assert result.comparison is not None
+    summary = error_summary(values, result.comparison.time)
+    if summary is not None and result.totals is not None and quantity in result.totals.errors:
+        summary["rms"] = result.totals.errors[quantity][1]
+    return summary
 
 
 def _orbit(result: CheckResult) -> dict[str, Any] | None:
@@ -151,15 +160,17 @@ def file_object(result: CheckResult) -> dict[str, Any]:
     if comparison is None:
         found |= {"error": None, "floor": None, "reference": None, "growth": None}
     else:
-        time = comparison.time
         floor = result.floor
         found["error"] = {
-            "position": error_summary(comparison.distance, time),
-            "radial": error_summary(comparison.radial, time),
-            "along": error_summary(comparison.along, time),
-            "cross": error_summary(comparison.cross, time),
-            "velocity": error_summary(comparison.velocity_error, time),
-            "clock": error_summary(comparison.clock_error, time),
+            name: summary_of(result, name, values)
+            for name, values in (
+                ("position", comparison.distance),
+                ("radial", comparison.radial),
+                ("along", comparison.along),
+                ("cross", comparison.cross),
+                ("velocity", comparison.velocity_error),
+                ("clock", comparison.clock_error),
+            )
         }
         found["floor"] = {
             "position": floor.position if floor else None,

@@ -7,7 +7,7 @@ import textwrap
 from typing import TYPE_CHECKING, Any
 
 from truefall.validate.budget import RULE
-from truefall.validate.report.document import error_summary
+from truefall.validate.report.document import summary_of
 
 if TYPE_CHECKING:
     from truefall.validate.check import CheckResult
@@ -27,6 +27,8 @@ VERDICTS = {
 }
 
 
+#: Quantities whose label on the page is another.
+_DRIFTS = {"ang. mom.": "angular_momentum"}
 #: Where a start comes from, in words.
 _STARTS = {
     "orbit file": "its declaration (orbit file, header, sidecar)",
@@ -106,7 +108,7 @@ def _error_lines(result: CheckResult, units: dict[str, str]) -> list[str]:
     ]
     lines = [f"  {'error':<14}{'largest':>10}  {'rms':>10}  {'at time':>14}  unit"]
     for label, values, unit in rows:
-        summary = error_summary(values, comparison.time)
+        summary = summary_of(result, label.strip(), values)
         if summary is None:
             continue
         lines.append(
@@ -119,7 +121,7 @@ def _error_lines(result: CheckResult, units: dict[str, str]) -> list[str]:
         ("norm", comparison.drifts.norm),
     ):
         if drift is not None:
-            summary = error_summary(drift.values, comparison.time)
+            summary = summary_of(result, _DRIFTS.get(label, label), drift.values)
             assert summary is not None
             lines.append(
                 f"  {label:<14}{_error_number(summary['max']):>10}  "

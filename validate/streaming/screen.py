@@ -156,7 +156,8 @@ class _Reducer:
             np.ones(1, np.bool_) if plan.judged is None else plan.judged(time),
             np.ones(1) if plan.turns is None else plan.turns(time),
             plan.tolerances, plan.kinds, plan.growing, plan.orbit, plan.chart, plan.light,
-            scratch[3], scratch[4], found.largest, found.where, found.laws, found.counts, marks, open_rows, open_margins,
+            scratch[3], scratch[4], found.largest, found.where, found.laws, found.counts, marks,
+            open_rows, open_margins,
         )  # fmt: skip
         inside = self.kept[
             np.searchsorted(self.kept, first) : np.searchsorted(self.kept, first + n)
