@@ -191,7 +191,7 @@ def _rules(names: list[str], counts: _Counts, arrays: Mapping[str, Floats]) -> d
             clock = name == "time" or name in CLOCKS
             few = clock or longest[name] >= TELLING_DIGITS - 1
             return few or np.unique(arrays[name][: 1 << 16]).size <= FEW_VALUES
-        if name == "time" and counts.flag(k, "scientific") == 0:
+        if name == "time":
             shown = np.flatnonzero(counts.decimals[k].any(axis=0))
             if _exact_stamps(arrays["time"], int(shown[-1]) - DECIMALS):
                 return True
