@@ -23,7 +23,7 @@ from truefall.reference.states import Bounded, Floats
 __all__ = ["Enclosure", "Sample"]
 
 #: Working precisions in bits, tried in turn.
-PRECISIONS = (256, 384, 640, 1024, 2048, 4096, 8192)
+PRECISIONS = (160, 256, 384, 640, 1024, 2048, 4096, 8192)
 _TIE_BITS = 400  # a ball this tight that still straddles a rounding boundary is a tie
 T = TypeVar("T")
 _RETRY = (MoreBits, NotCovered, TooSmall)

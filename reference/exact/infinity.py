@@ -37,6 +37,7 @@ class Infinity(Taylor):
         self.poly_v = arb_poly(germ.v.series.coeffs())
         self.tail_v = pow2_ball(germ.tail_v(self.h_log))
         self.clocks = {"chart": self._integrate(0, chart)}
+        self._powers = {}
         self._poles(tau)
 
     def _poles(self, tau: Disc) -> None:

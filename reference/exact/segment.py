@@ -23,6 +23,10 @@ from truefall.reference.exact.flow import CLOCKS, Flow, Germ
 
 __all__ = ["ClockSeries", "NotCovered", "Point", "Taylor", "interval_newton"]
 
+_FLOAT_STEPS = 12
+#: Share of the largest term below which a coefficient means nothing in float64.
+_UNSEEN = 2.0**-56
+
 
 class NotCovered(ArithmeticError):
     """The value asked for is not certainly inside this piece; take another or more bits."""
@@ -105,6 +109,7 @@ class Taylor:
         self.poly_v = arb_poly(germ.v.series.coeffs())
         self.tail_v = pow2_ball(germ.tail_v(self.h_log))
         self.clocks = {name: self._integrate(*pair) for name, pair in discs.items()}
+        self._powers: dict[str, list[float]] = {}
         if at_horizon:
             coefficients = [-2 * c for c in germ.u.series.coeffs()[1:]]
             self.poly_gap = arb_poly(coefficients)
@@ -198,7 +203,7 @@ class Taylor:
         if series.residue:
             return self._find_log(series, target)
         middle = target.mid()
-        start = self._guess(series.poly, middle)
+        start = self._guess(name, middle)
         x = self._newton(lambda z: series.poly(z) - middle, series.slope, start)
         return self._certify(x, series.value(x) - target, lambda z: self.ball_rate(name, z))
 
@@ -232,13 +237,36 @@ class Taylor:
         spread = (4 * residual.abs_upper() + abs(z) * arb((1, 4 - self.flow.precision))).upper()
         return place(interval_newton(z, residual, slope_on, spread))
 
-    def _guess(self, poly: arb_poly, target: arb) -> arb:
-        """A first guess for ``poly(x) = target`` from its quadratic part."""
-        c0, c1 = float((poly[0] - target).mid()), float(poly[1].mid())
-        if c1 == 0.0:
+    def _guess(self, name: str, target: arb) -> arb:
+        """A first guess for the parameter at which a clock shows ``target``, by float64 Newton.
+
+        From there two steps of the real thing reach the working precision.
+        """
+        c0 = float((self.clocks[name].poly[0] - target).mid())
+        powers = self._float_powers(name)
+        if not powers or powers[-1] == 0.0:
             return arb(0.5 * self.h)
-        x = -c0 / c1
-        return arb(min(max(x, -self.h), self.h)) if x == x else arb(0)
+        x = min(max(-c0 / powers[-1], -self.h), self.h)
+        for _ in range(_FLOAT_STEPS):
+            value = slope = 0.0
+            for c in powers:  # highest first, without the constant term
+                slope = slope * x + value
+                value = value * x + c
+            slope, value = slope * x + value, value * x + c0
+            step = value / slope if slope else 0.0
+            x = min(max(x - step, -self.h), self.h)
+            if abs(step) <= 1e-15 * self.h:
+                break
+        return arb(x) if x == x else arb(0)
+
+    def _float_powers(self, name: str) -> list[float]:
+        """Coefficients of a clock from the highest that float64 can see down to the first."""
+        if name not in self._powers:
+            found = [float(c.mid()) for c in self.clocks[name].poly.coeffs()[1:]]
+            sizes = [abs(c) * self.h**k for k, c in enumerate(found)]
+            seen = [k for k, size in enumerate(sizes) if size > _UNSEEN * max(sizes)]
+            self._powers[name] = found[: seen[-1] + 1][::-1] if seen else []
+        return self._powers[name]
 
     def find_u(self, u: arb, side: int = 0, guess: arb | None = None) -> arb:
         """The parameter at which ``u`` is reached; ``side`` picks it at a turning point."""
