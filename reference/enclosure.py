@@ -31,11 +31,13 @@ _RETRY = (MoreBits, NotCovered, TooSmall)
 
 @dataclass(frozen=True)
 class Sample:
-    """One instant: position (3), velocity (3), proper time or affine parameter, chart time."""
+    """One instant: position (3), velocity (3), proper time (affine), chart time, azimuth.
+
+    ``numbers`` holds them in this order.
+    """
 
     numbers: list[Rounded]
     radius: float
-    azimuth: float
 
 
 class Enclosure:
@@ -237,7 +239,7 @@ class Enclosure:
         if numbers is None:
             return None
         radius = ball_to_float(self._length / instant.u)
-        return Sample(numbers, radius, ball_to_float(instant.azimuth))
+        return Sample(numbers, radius)
 
     def _rounded(self, precision: int, instant: Instant, tight: arb) -> list[Rounded] | None:
         """The numbers of a sample, or None if the enclosure does not settle them."""
@@ -252,6 +254,7 @@ class Enclosure:
             [v * self._speed for v in velocity],
             [instant.tau * (self._time if self.motion.mu else self._length)],
             [instant.chart * self._time],
+            [instant.azimuth],
         ]
         numbers: list[Rounded] = []
         for group in groups:

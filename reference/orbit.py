@@ -364,8 +364,7 @@ class Orbit:
     def _pack(self, stamps: Floats, samples: list[Sample]) -> States:
         n = len(samples)
         numbers = [(q.value, q.low, q.bound) for s in samples for q in s.numbers]
-        value, low, bound = np.array(numbers).reshape(n, 8, 3).transpose(2, 0, 1).copy()
-        azimuth = np.array([s.azimuth for s in samples])
+        value, low, bound = np.array(numbers).reshape(n, 9, 3).transpose(2, 0, 1).copy()
 
         def column(k: int, wanted: bool) -> tuple[Floats | None, ...]:
             if not wanted:
@@ -394,6 +393,8 @@ class Orbit:
             coordinate_time_low=chart_low,
             coordinate_time_bound=chart_bound,
             radius=np.array([s.radius for s in samples]),
-            azimuth=azimuth,
-            winding=azimuth / (2 * np.pi),
+            azimuth=value[:, 8].copy(),
+            azimuth_low=low[:, 8].copy(),
+            azimuth_bound=bound[:, 8].copy(),
+            winding=value[:, 8] / (2 * np.pi),
         )

@@ -85,8 +85,10 @@ class States:
         The chart's time since the start where ``time`` is proper time; else None.
     radius : (n,)
         Areal radius.
-    azimuth, winding : (n,)
-        Angle swept since the start, radians, not wrapped; and the same in turns.
+    azimuth : (n,)
+        Angle swept since the start, radians, not wrapped.
+    winding : (n,)
+        The same in turns.
     """
 
     time: Floats
@@ -107,4 +109,6 @@ class States:
     coordinate_time_bound: Floats | None
     radius: Floats
     azimuth: Floats
+    azimuth_low: Floats
+    azimuth_bound: Floats
     winding: Floats

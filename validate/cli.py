@@ -188,6 +188,7 @@ def _writable(target: str) -> None:
 @cli.command()
 @click.argument("orbit_file", required=False, metavar="ORBIT.toml")
 @click.option("--case", "case_name", metavar="NAME", help="A case of the catalogue instead.")
+@click.option("--all-cases", is_flag=True, help="Every case, NAME.h5 each, into the folder F.")
 @click.option("--out", required=True, metavar="F", help="Where to write; format by suffix.")
 @click.option("--truncate", is_flag=True, help="Stop at the orbit's end instead of refusing.")
 @click.option("--certified", is_flag=True, help="HDF5: second words beside the bounds.")
@@ -195,16 +196,17 @@ def _writable(target: str) -> None:
 def make(
     orbit_file: str | None,
     case_name: str | None,
+    all_cases: bool,
     out: str,
-    truncate: bool,
-    certified: bool,
-    reproducible: bool,
+    **how: bool,
 ) -> int:
     """Write a reference trajectory at exactly the times of an orbit file."""
-    if (orbit_file is None) == (case_name is None):
-        raise UsageError("make needs an orbit file, or --case NAME, and not both")
+    if [orbit_file is not None, case_name is not None, all_cases].count(True) != 1:
+        raise UsageError("make needs one of: an orbit file, --case NAME, --all-cases")
+    if all_cases:
+        return _make_all(out, how)
     _writable(out)
-    if certified and not out.lower().endswith((".h5", ".hdf5")):
+    if how["certified"] and not out.lower().endswith((".h5", ".hdf5")):
         raise UsageError(f"--certified needs HDF5 (.h5), the only format with bounds, not {out}")
     from truefall.validate.make import make as make_file
     from truefall.validate.orbit_file import read_orbit_file
@@ -216,11 +218,31 @@ def make(
     else:
         spec = read_orbit_file(str(orbit_file), need_samples=True)
     with working(f"making {out}"):
-        made = make_file(
-            spec, out, truncate=truncate, certified=certified, reproducible=reproducible
-        )
+        made = make_file(spec, out, **how)
     note = f"; {made.end_note}" if made.end_note else ""
     say(f"wrote {made.path}: {made.rows} rows, {made.orbit_class} orbit{note}", err=True)
+    return 0
+
+
+def _make_all(folder: str, how: dict[str, bool]) -> int:
+    """Every case of the catalogue, NAME.h5 each."""
+    from pathlib import Path
+
+    from truefall.validate.cases import load_cases
+    from truefall.validate.make import make as make_file
+
+    if not folder:
+        raise UsageError("an empty name for the output; is a variable of the shell unset?")
+    place = Path(folder)
+    if not place.absolute().parent.is_dir() or (place.exists() and not place.is_dir()):
+        raise InputError("cannot be made: with --all-cases name a folder", place)
+    place.mkdir(exist_ok=True)
+    rows = 0
+    cases = load_cases()
+    for case in cases:
+        with working(f"making {case.name}"):
+            rows += make_file(case.spec, place / f"{case.name}.h5", **how).rows
+    say(f"wrote {len(cases)} sets into {place}: {rows} rows", err=True)
     return 0
 
 

@@ -7,6 +7,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
+import numpy.typing as npt
 
 from truefall.validate.errors import InputError
 
@@ -16,7 +17,7 @@ if TYPE_CHECKING:
 __all__ = ["Inspection", "inspect_set"]
 
 _REQUIRED = ("gm", "system", "particle", "chart", "clock", "start_time", "orbit_class")
-_VECTORS = ("position", "velocity")
+_SERIES = ("position", "velocity", "proper_time", "coordinate_time", "affine", "azimuth")
 
 
 @dataclass
@@ -110,11 +111,19 @@ def _layout(path: Path, name: str, found: Inspection) -> None:
                     found.faults.append(f"{name}/{key} has no scale {scale!r} on axis {axis}")
 
 
+def _values(trajectory: Trajectory, key: str) -> npt.NDArray[np.float64] | None:
+    """A series of a set; the azimuth stands among what is stored beside the states."""
+    if key == "azimuth":
+        return None if trajectory.stored is None else trajectory.stored.arrays.get(key)
+    found: npt.NDArray[np.float64] | None = getattr(trajectory, key)
+    return found
+
+
 def _bounds(trajectory: Trajectory, found: Inspection) -> None:
     """Bounds for every series, second words no larger than half a unit in the last place."""
     stored = dict(trajectory.stored.arrays) if trajectory.stored is not None else {}
-    for key in (*_VECTORS, "proper_time", "coordinate_time", "affine"):
-        values = getattr(trajectory, key)
+    for key in _SERIES:
+        values = _values(trajectory, key)
         if values is None:
             continue
         if f"{key}_bound" not in stored:
@@ -134,8 +143,8 @@ def _verify(trajectory: Trajectory, count: int, found: Inspection) -> tuple[int,
     states = orbit.at(trajectory.time[rows])
     stored = dict(trajectory.stored.arrays) if trajectory.stored is not None else {}
     outside = np.zeros(rows.size, dtype=bool)
-    for key in (*_VECTORS, "proper_time", "coordinate_time", "affine"):
-        values, true = getattr(trajectory, key), getattr(states, key)
+    for key in _SERIES:
+        values, true = _values(trajectory, key), getattr(states, key)
         if values is None or true is None or f"{key}_bound" not in stored:
             continue
         # the difference of two words each is exact to a part in 2^50 of the bound
@@ -194,8 +203,7 @@ def inspect_set(path: str | Path, *, verify: int = 0) -> Inspection:
         _bounds(trajectory, found)
         verified, outside = _verify(trajectory, verify, found) if verify else (0, 0)
         stored = dict(trajectory.stored.arrays) if trajectory.stored is not None else {}
-        series = [k for k in (*_VECTORS, "proper_time", "coordinate_time", "affine")
-                  if getattr(trajectory, k) is not None]  # fmt: skip
+        series = [k for k in _SERIES[:-1] if _values(trajectory, k) is not None]
         found.trajectories.append(
             {
                 "name": trajectory.name,

@@ -63,7 +63,8 @@ class StoredReference:
     Attributes
     ----------
     arrays : mapping
-        ``position_low``, ``position_bound``, ... by dataset name, each in the shape of its base.
+        ``position_low``, ``position_bound``, ... by dataset name, each in the shape of its base;
+        ``azimuth`` (n,) with its words besides.
     invariants : mapping
         Scalars (energy, ...) by name: value, second word or None, proven bound.
     """

@@ -101,3 +101,24 @@ def test_a_case_shown_as_an_orbit_file_makes_the_same_trajectory(run: Run, tmp_p
     assert run("make", tmp_path / "light-critical.toml", "--out", outs[0]).status == 0
     assert run("make", "--case", "light-critical", "--out", outs[1]).status == 0
     assert outs[0].read_bytes() == outs[1].read_bytes()
+
+
+def test_make_writes_every_case_into_a_folder(run, tmp_path, monkeypatch):
+    """Only two cases here, to be quick: a set each, which inspect finds in order."""
+    from truefall.validate import cases
+    from truefall.validate.inspection import inspect_set
+
+    some = [cases.case("plunge-kerr-schild"), cases.case("light-circular")]
+    monkeypatch.setattr(cases, "load_cases", lambda: some)
+    folder = tmp_path / "sets"
+    done = run("make", "--all-cases", "--out", str(folder), "--certified")
+
+    assert done.status == 0
+    assert sorted(p.name for p in folder.iterdir()) == [f"{c.name}.h5" for c in reversed(some)]
+    for path in folder.iterdir():
+        found = inspect_set(path, verify=5)
+        assert found.conforms
+        assert "azimuth" in found.trajectories[0]["series"]
+    (tmp_path / "file").write_text("")
+    assert run("make", "--all-cases", "--out", str(tmp_path / "file")).status == 4
+    assert run("make", "--all-cases", "--case", "x", "--out", str(folder)).status == 2

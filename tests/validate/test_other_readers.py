@@ -1,4 +1,4 @@
-"""Result sets read without truefall: h5dump, xarray, a C and a Fortran program."""
+"""Result sets read without truefall: h5dump, xarray, netCDF, Octave, a C and a Fortran program."""
 
 from __future__ import annotations
 
@@ -54,6 +54,46 @@ def test_xarray_reads_dimensions_units_and_values(made):
             assert np.array_equal(data["velocity"].values, trajectory.velocity)
             low = trajectory.stored.arrays["proper_time_low"]
             assert np.array_equal(data["proper_time_low"].values, low)
+
+
+def test_the_netcdf_library_reads_dimensions_units_and_strings(made):
+    """Through netCDF4: named dimensions shared by all variables, attributes as plain strings."""
+    path, trajectory = made
+    # the module warns of its own build when it is imported
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore")
+        netcdf = pytest.importorskip("netCDF4")
+    with netcdf.Dataset(path) as data:
+        group = data[f"trajectory/{NAME}"]
+        assert group["velocity"].dimensions == ("time", "component")
+        assert group["azimuth"].units == "rad"
+        assert group.chart == "isotropic"
+        assert np.array_equal(group["position"][...].data, trajectory.position)
+        bound = trajectory.stored.arrays["velocity_bound"]
+        assert np.array_equal(group["velocity_bound"][...].data, bound)
+
+
+OCTAVE = """
+set = load("-hdf5", argv(){1});
+names = fieldnames(set.trajectory);
+group = set.trajectory.(names{1});
+printf("%d %.17g %.17g %.17g\\n", columns(group.position), group.position(:, 4));
+"""
+
+
+def test_octave_reads_numbers_as_they_are(made, require_tool, tmp_path):
+    """Groups become structures, arrays arrive with reversed dimensions."""
+    path, trajectory = made
+    script = tmp_path / "show.m"
+    script.write_text(OCTAVE)
+    done = subprocess.run(
+        [require_tool("octave-cli"), "--norc", "--no-history", script, path],
+        capture_output=True, text=True, check=False,
+    )  # fmt: skip
+    rows, *numbers = done.stdout.split()
+
+    assert int(rows) == len(trajectory)
+    assert [float(n) for n in numbers] == trajectory.position[3].tolist()
 
 
 C_SOURCE = r"""

@@ -240,10 +240,11 @@ def _write(
     from truefall.validate.formats.assemble import columns_of
     from truefall.validate.formats.files import creation_date, producer, replace_file
     from truefall.validate.formats.metadata import flatten
+    from truefall.validate.trajectory import SERIES
 
     kind = suffix_of(path)
     created = creation_date(reproducible)
-    plain = {k: v for k, v in series.items() if not k.endswith(("_low", "_bound"))}
+    plain = {k: v for k, v in series.items() if k in SERIES}
     if kind == "hdf5":
         from truefall.validate.formats import hdf5_write
 
@@ -348,6 +349,9 @@ def write_states(
         series[key + "_bound"] = getattr(states, key + "_bound")
         if certified:
             series[key + "_low"] = getattr(states, key + "_low")
+    if certified:
+        for name in ("azimuth", "azimuth_low", "azimuth_bound"):
+            series[name] = getattr(states, name)
     _write(Path(path), metadata, series, _invariants(orbit, certified), reproducible)
 
 

@@ -41,6 +41,12 @@ def declared(file: GuardedFile, group: Any, name: str) -> dict[str, Any]:
 def _words(file: GuardedFile, group: Any, arrays: dict[str, Floats]) -> dict[str, Floats]:
     """Second words and bounds, each in the shape of what it belongs to."""
     stored: dict[str, Floats] = {}
+    azimuth = file.numbers(group, "azimuth")
+    if azimuth is not None:
+        if azimuth.shape != arrays["time"].shape or not np.isfinite(azimuth).all():
+            raise InputError(f"{group.name}/azimuth is not one finite number a row", file.path)
+        stored["azimuth"] = azimuth.astype(np.float64)
+        arrays = {**arrays, "azimuth": stored["azimuth"]}
     for key, values in arrays.items():
         for suffix in ("_low", "_bound"):
             words = file.numbers(group, key + suffix)

@@ -23,6 +23,7 @@ _LONG = {
     "proper_time": "proper time since the start",
     "coordinate_time": "chart time since the start",
     "affine": "affine parameter since the start, E = 1",
+    "azimuth": "angle swept in the orbital plane since the start, not wrapped",
 }
 
 Floats = npt.NDArray[np.float64]
@@ -54,6 +55,7 @@ def _units(system: str) -> dict[str, str]:
         "radial_period": unit.time,
         "proper_radial_period": unit.time,
         "azimuth_per_radial_period": "rad",
+        "azimuth": "rad",
     }
 
 
@@ -102,7 +104,9 @@ def _series(group: Any, series: Mapping[str, Floats], units: Mapping[str, str]) 
     component.attrs["units"] = _text("1")
     component.attrs["long_name"] = _text("Cartesian component: 0 x, 1 y, 2 z")
     component.make_scale("component")
-    for name in (base + suffix for base in SERIES[1:] for suffix in ("", "_low", "_bound")):
+    for name in (
+        base + suffix for base in (*SERIES[1:], "azimuth") for suffix in ("", "_low", "_bound")
+    ):
         if name not in series:
             continue
         values = series[name]
