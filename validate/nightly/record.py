@@ -19,6 +19,7 @@ __all__ = [
     "INFORMATION",
     "OUTCOMES",
     "QUANTITIES",
+    "STANDING",
     "VERDICTS",
     "Alarm",
     "CaseRecord",
@@ -41,10 +42,11 @@ OUTCOMES = (
     "output refused",
     "wrong rows",
     "worker lost",
+    "fault of truefall",
 )
 #: Quantities whose errors are recorded.
 QUANTITIES = ("position", "velocity", "clock", "energy", "angular_momentum")
-#: Names of alarms: any of them makes the night's exit status 1 at least.
+#: Names of alarms: a night on which one appears has exit status 1 at least.
 ALARMS = (
     "not-deterministic",
     "bits-changed",
@@ -54,7 +56,10 @@ ALARMS = (
     "slow-drift",
     "case-vanished",
 )
-#: Names of notes that change no exit status.
+#: Alarms of earlier nights that nobody has mended or accepted since; exit status 1 as well.
+STANDING = ("still-worse", "still-missing")
+#: Names of notes, which change no exit status.  "bits-changed" and "verdict-changed" are notes
+#: where commits explain the one, or where the other is for the better.
 INFORMATION = ("new-segment", "new-case", "improved", "accepted")
 
 
@@ -109,6 +114,12 @@ class CaseRecord:
         SHA-256 over the obtained numbers (time, position, velocity, clock), "" without any.
     title, why : str
         From the catalogue: what the case is and what makes it hard.
+    case_digest : str
+        Of the orbit, the times and the budget: another one is another case of the same name.
+    guards : mapping of str to float
+        The guard of each quantity in ``errors`` at its maximum.
+    baseline, level : mapping of str to float
+        What later nights hold the errors against (see :mod:`.noticing`).
     """
 
     key: str
@@ -136,6 +147,10 @@ class CaseRecord:
     digest: str = ""
     title: str = ""
     why: str = ""
+    case_digest: str = ""
+    guards: Mapping[str, float] = field(default_factory=dict)
+    baseline: Mapping[str, float] = field(default_factory=dict)
+    level: Mapping[str, float] = field(default_factory=dict)
 
     @property
     def position_error(self) -> float | None:
@@ -145,9 +160,23 @@ class CaseRecord:
 
 @dataclass(frozen=True)
 class Alarm:
-    """One thing noticed.  ``name`` is one of ``ALARMS`` or ``INFORMATION``; ``text`` is one
-    sentence; ``commits`` are those of the code under test between the two nights, the newest
-    first, "abbreviated hash and subject"; ``key`` is the case's or "" for the whole night."""
+    """One thing noticed.
+
+    Parameters
+    ----------
+    name : str
+        One of ``ALARMS``, ``STANDING`` or ``INFORMATION``.
+    key : str
+        The case's, or "" for the whole night.
+    text : str
+        One sentence.
+    before, after : float or None
+        What is spoken of, in the case's own units.
+    commits : tuple of str
+        Those of the code under test between the two nights, the newest first: "hash subject".
+    level : str
+        "alarm", "standing" or "note".
+    """
 
     name: str
     key: str
@@ -155,11 +184,12 @@ class Alarm:
     before: float | None = None
     after: float | None = None
     commits: tuple[str, ...] = ()
+    level: str = "alarm"
 
     @property
     def is_alarm(self) -> bool:
-        """False for notes that only inform."""
-        return self.name in ALARMS
+        """False for what stands since an earlier night and for notes."""
+        return self.level == "alarm"
 
 
 @dataclass(frozen=True)
@@ -198,6 +228,10 @@ class Night:
         File name of this night's HDF5 file, relative to the output folder.
     seconds : float
         Wall-clock time of the whole night.
+    undecided : str
+        "error", "skip" or "pass": what an undecided case counts as.
+    missing : tuple of str
+        Keys of cases that vanished in this or an earlier night and were not accepted as gone.
     """
 
     number: int
@@ -215,6 +249,8 @@ class Night:
     commits: tuple[str, ...] = ()
     result_set: str = ""
     seconds: float = 0.0
+    undecided: str = "error"
+    missing: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True, eq=False)
