@@ -76,9 +76,9 @@ EQUATIONS: Mapping[str, Equations] = {
 
 
 def _taylor(problem: Problem) -> Parts:
-    from truefall.integrators.adaptive.taylor import parts
+    from truefall.integrators.adaptive import taylor, taylor_mino
 
-    return parts(problem)
+    return taylor_mino.parts(problem) if problem.kind == 9 else taylor.parts(problem)
 
 
 def _gauss_legendre(problem: Problem) -> Parts:
@@ -112,6 +112,7 @@ def _gauss(order: int) -> Method:
     source = "Hairer, Lubich & Wanner, Geometric Numerical Integration, II.1"
     return Method(
         f"gauss-legendre-{order}", order, "implicit", False, True, source, _gauss_legendre,
+        arithmetics=("float64", "compensated", "double-double"),
     )  # fmt: skip
 
 
@@ -120,7 +121,8 @@ METHODS: Mapping[str, Method] = {
     for m in (
         Method(
             "taylor", None, "adaptive", True, False, "Jorba & Zou 2005, Exp. Math. 14, 99",
-            _taylor, orders=range(2, 101), default_order=24,
+            _taylor, orders=range(2, 101), default_order=32,
+            arithmetics=("float64", "compensated", "double-double"),
             ),
         _runge_kutta("runge-kutta-4", 4, "explicit", "Kutta 1901, Z. Math. Phys. 46, 435"),
         _runge_kutta(

@@ -23,6 +23,8 @@ ARITHMETICS = ("float64", "compensated", "double-double")
 EVENTS: Mapping[str, int] = {
     "periapsis": 0, "apoapsis": 1, "radius": 2, "horizon": 2, "revolutions": 3,
 }  # fmt: skip
+#: Order of series whose last terms are to reach 1e-32.
+_ORDER_IN_TWO_WORDS = 48
 _DIRECTIONS: Mapping[str | None, int] = {"in": -1, "out": 1, None: 0}
 
 
@@ -100,12 +102,13 @@ def _positive(value: float | None, name: str, needed: bool) -> None:
         raise ValueError(f"{name} must be a positive number, not {value!r}")
 
 
-def _order(method: Method, order: int | None) -> int:
+def _order(method: Method, order: int | None, arithmetic: str) -> int:
     if method.order is not None:
         if order not in (None, method.order):
             raise ValueError(f"{method.name} has order {method.order}; leave order away")
         return method.order
-    found = method.default_order if order is None else order
+    usual = _ORDER_IN_TWO_WORDS if arithmetic == "double-double" else method.default_order
+    found = usual if order is None else order
     if found not in method.orders:
         allowed = method.orders
         steps = "" if allowed.step == 1 else f" in steps of {allowed.step}"
@@ -155,7 +158,7 @@ def check_request(
         raise ValueError("give a step or a tolerance, not both")
     if tolerance is not None and not how.adaptive:
         raise ValueError(f"{how.name} has a fixed step; give a step and no tolerance")
-    found = _order(how, order)
+    found = _order(how, order, arithmetic)
     number = chosen.variable(in_what)
     problem = Problem(chosen.kind, number, chosen.size, found, step is None)
     return Request(

@@ -156,6 +156,12 @@ def propagate(
     names = [event.name or event.kind for event in events]
     if not isinstance(max_steps, int) or max_steps < 1:
         raise ValueError(f"max_steps must be a whole number above 0, not {max_steps!r}")
+    if arithmetic == "double-double":
+        if events:
+            raise ValueError("events are watched in float64 and compensated arithmetic only")
+        from truefall.integrators.two_words import run_in_two_words
+
+        return run_in_two_words(request, x, v, max_steps, progress)
     return _run(request, x, v, codes, values, names, max_steps, progress)
 
 

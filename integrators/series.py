@@ -38,47 +38,42 @@ Integers = npt.NDArray[np.int64]
 
 
 @kernel
-def _dot(s: Floats, i: int, j: int, first: int, last: int, k: int) -> float:
-    """``sum s[i, m] s[j, k - m]`` for m from first to last - 1, in two strands for speed."""
-    even, odd = 0.0, 0.0
-    m = first
-    while m + 1 < last:
-        even += s[i, m] * s[j, k - m]
-        odd += s[i, m + 1] * s[j, k - m - 1]
-        m += 2
-    if m < last:
-        even += s[i, m] * s[j, k - m]
-    return even + odd
-
-
-@kernel
-def _half_square(s: Floats, i: int, first: int, k: int) -> float:
-    """``sum_m s[i, m] s[i, k - m]`` for m from first to k - first, by symmetry."""
-    half = (k + 1) // 2
-    total = 2.0 * _dot(s, i, i, first, half, k)
-    if k % 2 == 0 and k // 2 >= first:
-        total += s[i, k // 2] * s[i, k // 2]
-    return total
-
-
-@kernel
 def run_tape(lines: Integers, literals: Floats, par: Floats, s: Floats, k: int) -> None:
-    """Set coefficient ``k`` of every row of a tape; operations as numbered in tape.py."""
+    """Set coefficient ``k`` of every row of a tape; operations as numbered in tape.py.
+
+    The sums stand here in full: a call for each would cost more than the sum.
+    """
     for line in range(lines.shape[0]):
         op, out, i, j, at = (
             lines[line, 0], lines[line, 1], lines[line, 2], lines[line, 3], lines[line, 4],
         )  # fmt: skip
         if op == 0:
-            s[out, k] = _dot(s, i, j, 0, k + 1, k)
-        elif op == 1:
-            s[out, k] = _half_square(s, i, 0, k)
+            even, odd = 0.0, 0.0
+            for m in range(0, k, 2):
+                even += s[i, m] * s[j, k - m]
+                odd += s[i, m + 1] * s[j, k - m - 1]
+            if k % 2 == 0:
+                even += s[i, k] * s[j, 0]
+            s[out, k] = even + odd
+        elif op == 1 or (op == 3 and k > 0):
+            row, first = (i, 0) if op == 1 else (out, 1)
+            total = 0.0
+            for m in range(first, (k + 1) // 2):
+                total += s[row, m] * s[row, k - m]
+            total *= 2.0
+            if k % 2 == 0:
+                total += s[row, k // 2] * s[row, k // 2]
+            s[out, k] = total if op == 1 else 0.5 * (s[i, k] - total) / s[out, 0]
         elif op == 2:
-            s[out, k] = (s[i, k] - _dot(s, out, j, 0, k, k)) / s[j, 0]
+            even, odd = s[i, k], 0.0
+            for m in range(0, k - 1, 2):
+                even -= s[out, m] * s[j, k - m]
+                odd += s[out, m + 1] * s[j, k - m - 1]
+            if k % 2 == 1:
+                even -= s[out, k - 1] * s[j, 1]
+            s[out, k] = (even - odd) / s[j, 0]
         elif op == 3:
-            if k == 0:
-                s[out, 0] = sqrt(s[i, 0])
-            else:
-                s[out, k] = 0.5 * (s[i, k] - _half_square(s, out, 1, k)) / s[out, 0]
+            s[out, 0] = sqrt(s[i, 0])
         elif op == 4:
             value = literals[at + 2] if k == 0 else 0.0
             if i >= 0:

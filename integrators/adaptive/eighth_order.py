@@ -1,7 +1,8 @@
 """The 8(5,3) method of Dormand and Prince in the form of Hairer.
 
-Coefficients as published with Hairer, Norsett & Wanner, Solving Ordinary Differential Equations I,
-second edition, II.5 and II.10 (the program text; seen); the order conditions hold them in the tests.
+Coefficients as published with Hairer, Norsett & Wanner, Solving Ordinary Differential Equations
+I, second edition, II.5 and II.10 (the numbers of the program; seen); the order conditions hold
+them in the tests.
 """
 
 from __future__ import annotations

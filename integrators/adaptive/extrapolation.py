@@ -27,7 +27,7 @@ def _midpoint(
     kind: int, variable: int, par: Floats, y: Floats, h: float, count: int, first: Floats,
     work: Floats, out: Floats,
 ) -> None:  # fmt: skip
-    """Change over ``h`` by ``count`` midpoint substeps; ``work`` (4, n), ``first`` the rate at y."""
+    """Change over ``h`` by ``count`` midpoint substeps; ``first`` is the rate at y."""
     n = y.size
     d = h / count
     for m in range(n):

@@ -2,8 +2,8 @@
 
 (Everhart 1985, in Dynamics of Comets, 185; Rein & Spiegel 2015, MNRAS 446, 1424, for the step
 control; from memory.)  The nodes are the roots of P_7 + P_8, found here to 50 digits.  The rate is
-a polynomial of degree 7 through its values at the nodes, its stages are iterated to round-off from the
-continuation of the step before.  The error is estimated from the polynomial's highest power.
+a polynomial of degree 7 through its values at the nodes; its stages are iterated to round-off from
+the continuation of the step before.  The error is estimated from the polynomial's highest power.
 """
 
 from __future__ import annotations

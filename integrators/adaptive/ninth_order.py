@@ -1,10 +1,10 @@
 """A ninth-order method with a continuous one of order 8, and an error estimate of order 8.
 
-Coefficients of the seventeen stages and of the continuous weights b_i(theta) = sum_k P_ik theta^(k+1):
-P. J. Prince, Parallel derivation of efficient continuous/discrete explicit Runge-Kutta methods,
-2018 (seen at second hand with 30 digits; the conditions of all 486 trees to order 9 hold to 1e-29
-there).  The pair is completed here: an eighteenth stage is the rate at the step's end (the first of
-the next step), a nineteenth the rate at the middle of the continuous solution.  The continuous
+Coefficients of the seventeen stages and of the continuous weights b_i(theta) = sum_k P_ik
+theta^(k+1): P. J. Prince, Parallel derivation of efficient continuous/discrete explicit Runge-Kutta
+methods, 2018 (seen at second hand with 30 digits; the conditions of all 486 trees to order 9 hold
+there to 1e-29).  The pair is completed here: an eighteenth stage is the rate at the step's end (the
+first of the next step), a nineteenth the rate at the middle of the continuous solution u.  That
 solution has order 8, so h (f(u) - u') at the middle vanishes for all trees up to order 8: it is the
 difference of the ninth-order weights and weights of order 8.
 """

@@ -1,0 +1,135 @@
+"""Taylor series of the orbit in Mino time, written out for speed: the areal chart.
+
+The same series as the tape of ``equations/mino.py`` would give, from these relations::
+
+    w' = mu + L^2 (3 u^2 - u),   r u = 1,   q (1 - 2 u) = 1,
+    lambda' = r^2,   T' = E r^2 q = E (r^2 + 2 r + 4 q)
+
+and the rotation n' = m, m' = -L^2 n as two series for all components.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+import numpy.typing as npt
+
+from truefall.integrators.adaptive.taylor import decay
+from truefall.integrators.compiled import kernel
+from truefall.integrators.equations.rates import scales
+from truefall.integrators.equations.types import Floats
+from truefall.integrators.methods import Parts, Problem
+
+__all__ = ["parts", "taylor_mino_inside", "taylor_mino_step"]
+
+Integers = npt.NDArray[np.int64]
+
+# Rows of the memory: u, w, T, lambda, cosine and sine of the rotation, r, q.
+_ROWS = 8
+
+
+@kernel
+def mino_orbit(par: Floats, s: Floats, order: int) -> None:
+    """Coefficients 1 to ``order`` of u, w, T, lambda from coefficient 0.
+
+    Products by symmetry, pair by pair, all in one loop, in which a step spends its time.
+    """
+    energy, mu, square = par[0], par[1], par[2]
+    u, w, time, clock, r, q = s[0], s[1], s[2], s[3], s[6], s[7]
+    r[0], q[0] = 1.0 / u[0], 1.0 / (1.0 - 2.0 * u[0])
+    for k in range(order):
+        uu, rr, ur, uq = 0.0, 0.0, 0.0, 0.0
+        for m in range(1, (k + 1) // 2):
+            uu += u[m] * u[k - m]
+            rr += r[m] * r[k - m]
+            ur += u[m] * r[k - m] + u[k - m] * r[m]
+            uq += u[m] * q[k - m] + u[k - m] * q[m]
+        uu, rr = 2.0 * uu, 2.0 * rr
+        if k == 0:
+            uu, rr = u[0] * u[0], r[0] * r[0]
+        else:
+            if k % 2 == 0:
+                m = k // 2
+                uu += u[m] * u[m]
+                rr += r[m] * r[m]
+                ur += u[m] * r[m]
+                uq += u[m] * q[m]
+            r[k] = -r[0] * (ur + u[k] * r[0])
+            q[k] = 2.0 * q[0] * (uq + u[k] * q[0])
+            uu += 2.0 * u[0] * u[k]
+            rr += 2.0 * r[0] * r[k]
+        force = square * (3.0 * uu - u[k])
+        step = 1.0 / (k + 1)
+        w[k + 1] = (mu + force if k == 0 else force) * step
+        u[k + 1] = w[k] * step
+        clock[k + 1] = rr * step
+        time[k + 1] = energy * (rr + 2.0 * r[k] + 4.0 * q[k]) * step
+
+
+@kernel
+def rotation(square: float, s: Floats, order: int) -> None:
+    """Series of cos(L s) - 1 and sin(L s)/L in rows 4 and 5."""
+    s[4, 0], s[5, 0] = 1.0, 0.0
+    for k in range(order):
+        step = 1.0 / (k + 1)
+        s[5, k + 1] = s[4, k] * step
+        s[4, k + 1] = -square * s[5, k] * step
+
+
+@kernel
+def _change(s: Floats, y: Floats, square: float, order: int, theta: float, out: Floats) -> None:
+    """The change of the whole state (10,) at a point of the step."""
+    a, b, c, d, e, f = 0.0, 0.0, 0.0, 0.0, 0.0, 0.0
+    for k in range(order, 0, -1):
+        a = (a + s[0, k]) * theta
+        b = (b + s[1, k]) * theta
+        c = (c + s[2, k]) * theta
+        d = (d + s[3, k]) * theta
+        e = (e + s[4, k]) * theta
+        f = (f + s[5, k]) * theta
+    out[0], out[1], out[8], out[9] = a, b, c, d
+    for i in range(3):
+        out[2 + i] = e * y[2 + i] + f * y[5 + i]
+        out[5 + i] = e * y[5 + i] - square * (f * y[2 + i])
+
+
+@kernel
+def taylor_mino_step(
+    kind: int, variable: int, par: Floats, code: Integers, table: Floats, tolerance: float,
+    y: Floats, h: float, memory: Floats, change: Floats,
+) -> tuple[float, int, float]:  # fmt: skip
+    """One step; ``table[0, 0]`` 1 asks for a step chosen here."""
+    order = memory.shape[1] - 1
+    memory[0, 0], memory[1, 0], memory[2, 0], memory[3, 0] = y[0], y[1], y[8], y[9]
+    mino_orbit(par, memory, order)
+    rotation(par[2], memory, order)
+    if table[0, 0] == 1.0:
+        scales(kind, par, y, change)
+        change[2], change[3], change[4], change[5] = change[8], change[9], 1.0, 1.0
+        own = decay(memory, change, 6, order, tolerance)
+        if own < abs(h):
+            h = own if h > 0.0 else -own
+    _change(memory, y, par[2], order, h, change)
+    return 0.0, 1, h
+
+
+@kernel
+def taylor_mino_inside(
+    kind: int, variable: int, par: Floats, code: Integers, table: Floats, tolerance: float,
+    y: Floats, theta: float, before: Floats, memory: Floats, scratch: Floats, change: Floats,
+) -> int:  # fmt: skip
+    """The change at a point of the step from the series just made."""
+    _change(memory, y, par[2], memory.shape[1] - 1, theta, change)
+    return 0
+
+
+def parts(problem: Problem) -> Parts:
+    """Memory for the series."""
+    return Parts(
+        name="taylor_mino",
+        step=taylor_mino_step,
+        memory=(_ROWS, problem.order + 1),
+        table=np.array([[1.0 if problem.adaptive else 0.0]]),
+        dense=taylor_mino_inside,
+        exponent=1.0 / problem.order,
+        chooses=True,
+    )
