@@ -8,7 +8,10 @@ that revolution 1,000,000 is as good as the first.
 
 from __future__ import annotations
 
+import os
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -23,9 +26,14 @@ __all__ = ["Table", "build_table"]
 
 Floats = npt.NDArray[np.float64]
 
+#: As in the kernel, which is not imported before it is used: its compiler takes time to load.
 _DEGREE = 13
+_SLACK = 1e-9
 _FIRST_INTERVALS = 12
 _MAX_INTERVALS = 20_000
+#: Times from which on several cores pay, and how many at most.
+_WORTH_THREADS = 50_000
+_MOST_THREADS = 8
 _ANGLES = 64
 #: Least half-width of an interval in units of the last place of its times.
 _NARROW = 2.0**10
@@ -86,7 +94,18 @@ class Table:
             raise ValueError(f"the table covers times from {self.first!r} to {self.last!r}")
         position, velocity = np.empty((stamps.size, 3)), np.empty((stamps.size, 3))
         clock = np.empty(stamps.size)
-        self.fill(stamps, position, velocity, clock)
+        cores = min(_MOST_THREADS, len(os.sched_getaffinity(0)))
+        if stamps.size < _WORTH_THREADS or cores < 2:
+            self.fill(stamps, position, velocity, clock)
+            return position, velocity, clock
+        cuts = np.linspace(0, stamps.size, cores + 1).astype(int)
+        with ThreadPoolExecutor(cores) as pool:
+            parts = [slice(a, b) for a, b in pairwise(cuts)]
+            jobs = [
+                pool.submit(self.fill, stamps[p], position[p], velocity[p], clock[p]) for p in parts
+            ]
+        for job in jobs:
+            job.result()
         return position, velocity, clock
 
     def fastest(self) -> float:
@@ -202,7 +221,7 @@ def build_table(orbit: Orbit, first: float, last: float) -> Table:
     else:
         low, high, period, turn = cycle
         # reduced times may miss the edges by their rounding
-        slack = 1e-9 * (high - low)
+        slack = _SLACK * (high - low)
         low, high = low - slack, high + slack
         first, last = -np.inf, np.inf
     waiting = [(a, b) for a, b in _first_intervals(low, high)][::-1]

@@ -11,7 +11,12 @@ import numpy as np
 import numpy.typing as npt
 from numba import njit
 
-__all__ = ["fill"]
+__all__ = ["DEGREE", "SLACK", "fill"]
+
+#: Degree of the polynomials (odd).
+DEGREE = 13
+#: Share of a period by which pieces reach beyond it.
+SLACK = 1e-9
 
 Floats = npt.NDArray[np.float64]
 
@@ -137,46 +142,50 @@ def fill(
     circle : (m, 4)
         Cosine and sine, two words each, of ``m`` even angles; ``m`` a power of two.
     """
-    low_row = coefficients.shape[1] - 1
-    degree = low_row - 1
-    index, known = 0, 0.0
+    index, known, turns = 0, 0.0, 0.0
     turned = np.zeros((3, 2, 2))
     angle = np.array([1.0, 0.0, 0.0, 0.0])
     _turned(frame, frame_low, angle, turned)
+    back, back_low, on, on_low = 0.0, 0.0, 0.0, 0.0  # what whole periods take from the times, add
+    # the pieces reach beyond the period by a little; well inside it the last number of turns may
+    # serve again, near its ends it is worked out anew, so that it depends on the time alone
+    first = edges[0] + SLACK * period[0]
+    inner, outer = first + SLACK * period[0], first + (1.0 - SLACK) * period[0]
+    inverse = 1.0 / period[0] if period[0] > 0.0 else 0.0
     for row in range(times.size):
         high, low = _two_sum(times[row], -start)
-        turns = 0.0
-        if period[0] > 0.0:
-            turns = floor((high - edges[0]) / period[0])
-            if turns != 0.0:
-                p, e = _two_product(turns, period[0])
-                high, rest = _two_sum(high, -p)
-                low += rest - e - turns * period[1]
-                high, low = _two_sum(high, low)
-                if high < edges[0]:
+        if inverse > 0.0:
+            reduced = high - back
+            if not inner <= reduced <= outer:
+                turns = floor((high - first) * inverse)
+                if high - turns * period[0] < first:
                     turns -= 1.0
-                    high, rest = _two_sum(high, period[0])
-                    low += rest + period[1]
-        if turns != known:
-            _rotation(turns, turn, circle, angle)
-            _turned(frame, frame_low, angle, turned)
-            known = turns
+            if turns != known:
+                back, back_low = _two_product(turns, period[0])
+                back_low += turns * period[1]
+                on, on_low = _two_product(turns, period[2])
+                on_low += turns * period[3]
+                _rotation(turns, turn, circle, angle)
+                _turned(frame, frame_low, angle, turned)
+                known = turns
+            high, rest = _two_sum(high, -back)
+            low += rest - back_low
         index = _find(edges, high, index)
         x = ((high - centres[index]) + low) * scales[index]
         # c0 + x q(x), the even and odd powers of q apart: two short chains in place of a long one,
         # and all but the last sum rounds quantities that are small beside c0
         square = x * x
-        a = coefficients[index, degree, 0]
-        a2 = coefficients[index, degree - 1, 0]
-        b = coefficients[index, degree, 1]
-        b2 = coefficients[index, degree - 1, 1]
-        va = coefficients[index, degree, 2]
-        va2 = coefficients[index, degree - 1, 2]
-        vb = coefficients[index, degree, 3]
-        vb2 = coefficients[index, degree - 1, 3]
-        tau = coefficients[index, degree, 4]
-        tau2 = coefficients[index, degree - 1, 4]
-        for k in range(degree - 2, 1, -2):
+        a = coefficients[index, DEGREE, 0]
+        a2 = coefficients[index, DEGREE - 1, 0]
+        b = coefficients[index, DEGREE, 1]
+        b2 = coefficients[index, DEGREE - 1, 1]
+        va = coefficients[index, DEGREE, 2]
+        va2 = coefficients[index, DEGREE - 1, 2]
+        vb = coefficients[index, DEGREE, 3]
+        vb2 = coefficients[index, DEGREE - 1, 3]
+        tau = coefficients[index, DEGREE, 4]
+        tau2 = coefficients[index, DEGREE - 1, 4]
+        for k in range(DEGREE - 2, 1, -2):
             a = a * square + coefficients[index, k, 0]
             a2 = a2 * square + coefficients[index, k - 1, 0]
             b = b * square + coefficients[index, k, 1]
@@ -188,20 +197,19 @@ def fill(
             tau = tau * square + coefficients[index, k, 4]
             tau2 = tau2 * square + coefficients[index, k - 1, 4]
         a = (a * square + coefficients[index, 1, 0]) + x * a2
-        a = coefficients[index, 0, 0] + (x * a + coefficients[index, low_row, 0])
+        a = coefficients[index, 0, 0] + (x * a + coefficients[index, DEGREE + 1, 0])
         b = (b * square + coefficients[index, 1, 1]) + x * b2
-        b = coefficients[index, 0, 1] + (x * b + coefficients[index, low_row, 1])
+        b = coefficients[index, 0, 1] + (x * b + coefficients[index, DEGREE + 1, 1])
         va = (va * square + coefficients[index, 1, 2]) + x * va2
-        va = coefficients[index, 0, 2] + (x * va + coefficients[index, low_row, 2])
+        va = coefficients[index, 0, 2] + (x * va + coefficients[index, DEGREE + 1, 2])
         vb = (vb * square + coefficients[index, 1, 3]) + x * vb2
-        vb = coefficients[index, 0, 3] + (x * vb + coefficients[index, low_row, 3])
+        vb = coefficients[index, 0, 3] + (x * vb + coefficients[index, DEGREE + 1, 3])
         tau = (tau * square + coefficients[index, 1, 4]) + x * tau2
-        tau = coefficients[index, 0, 4] + (x * tau + coefficients[index, low_row, 4])
+        tau = coefficients[index, 0, 4] + (x * tau + coefficients[index, DEGREE + 1, 4])
         for k in range(3):
             low_part = turned[k, 0, 1] * a + turned[k, 1, 1] * b
             position[row, k] = turned[k, 0, 0] * a + (turned[k, 1, 0] * b + low_part)
             low_part = turned[k, 0, 1] * va + turned[k, 1, 1] * vb
             velocity[row, k] = turned[k, 0, 0] * va + (turned[k, 1, 0] * vb + low_part)
-        p, e = _two_product(turns, period[2])
-        s2, r2 = _two_sum(p, tau)
-        clock[row] = s2 + (r2 + e + turns * period[3])
+        total, rest = _two_sum(on, tau)
+        clock[row] = total + (rest + on_low)

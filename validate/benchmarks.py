@@ -1,6 +1,7 @@
 """How fast the instrument is, in one run: ``python -m truefall.validate.benchmarks``.
 
-Prints a table, and with ``--json`` one JSON document.  Machines are noisy: only ratios taken in
+Prints a table, and with ``--json`` one JSON document; ``--long`` measures long files too.
+Machines are noisy: only ratios taken in
 one run mean much.
 """
 
@@ -13,9 +14,13 @@ import tempfile
 import time
 from collections.abc import Callable
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 import numpy as np
 import numpy.typing as npt
+
+if TYPE_CHECKING:
+    from truefall.reference import Orbit
 
 __all__ = ["main", "measure"]
 
@@ -30,19 +35,24 @@ def _best(work: Callable[[], object], repeats: int = 3) -> float:
     return min(times)
 
 
-def _dop853(rows: int, span: float) -> tuple[float, float]:
-    """Seconds for SciPy's DOP853 (compiled right-hand side) and its position error at the end."""
+_REVOLUTIONS, _SAMPLES = 1000, 100
+
+
+def _dop853(times: npt.NDArray[np.float64]) -> tuple[float, float]:
+    """Seconds for SciPy's DOP853 with a compiled right-hand side, and its largest position error.
+
+    Harmonic coordinates, rtol 1e-12, dense output at ``times``.
+    """
     from scipy.integrate import solve_ivp
 
     from truefall.integrators.equations.rates import rate
     from truefall.integrators.index import EQUATIONS
     from truefall.integrators.starts import begin as state_of
-    from truefall.reference import Orbit
 
+    orbit = _subject()
     equations = EQUATIONS["harmonic"]
-    x, v = np.array([11.0, 0.0, 0.0]), np.array([0.0, 0.27, 0.0])
-    times = np.linspace(0.0, span, rows)
-    start, _, par, _ = state_of(equations, x[None], v[None], False)
+    x, v = np.array([orbit.position]), np.array([orbit.velocity])
+    start, _, par, _ = state_of(equations, x, v, False)
     out = np.empty(equations.size)
 
     def rates(_t: float, y: npt.NDArray[np.float64]) -> npt.NDArray[np.float64]:
@@ -52,12 +62,64 @@ def _dop853(rows: int, span: float) -> tuple[float, float]:
     rates(0.0, start[0])  # compiled before the clock starts
     begin = time.perf_counter()
     done = solve_ivp(
-        rates, (0.0, span), start[0], method="DOP853",
-        t_eval=times, rtol=1e-12, atol=1e-13,
+        rates, (0.0, float(times[-1])), start[0], method="DOP853", t_eval=times,
+        rtol=1e-12, atol=1e-14,
     )  # fmt: skip
     seconds = time.perf_counter() - begin
-    exact = Orbit(chart="harmonic", position=x, velocity=v).at([span])
-    return seconds, float(np.linalg.norm(done.y[:3, -1] - exact.position[0]))
+    picks = np.linspace(0, times.size - 1, 200).astype(int)
+    error = done.y[:3, picks].T - orbit.at(times[picks]).position
+    return seconds, float(np.linalg.norm(error, axis=1).max())
+
+
+def _subject() -> Orbit:
+    """The orbit that is measured: about p = 10, e = 0.3, in harmonic coordinates."""
+    from truefall.reference import Orbit
+
+    return Orbit(chart="harmonic", position=(6.6923, 0.0, 0.0), velocity=(0.0, 0.3317, 0.0))
+
+
+def _table_figures(figures: dict[str, float]) -> None:
+    """The table: speed, accuracy on the same build, and against DOP853."""
+    from truefall.reference.table import build_table
+
+    orbit = _subject()
+    period = orbit.radial_period
+    assert period is not None
+    figures["build table, s"] = _best(lambda: build_table(orbit, 0.0, 1.0))
+    table = build_table(orbit, 0.0, 1.0)
+    rng = np.random.default_rng(1)
+    for name, turns in (("revolution 1", 0.0), ("revolution 1,000,000", 1e6)):
+        times = np.sort((turns + rng.uniform(0, 1, 400)) * period.value)
+        true, (position, velocity, clock) = orbit.at(times), table.at(times)
+        assert true.proper_time is not None
+        assert true.proper_time_low is not None
+        pairs = (
+            (position, true.position, true.position_low),
+            (velocity, true.velocity, true.velocity_low),
+            (clock[:, None], true.proper_time[:, None], true.proper_time_low[:, None]),
+        )
+        worst = max(
+            float(np.max(np.linalg.norm((a - b) - c, axis=1) / np.spacing(_size(b))))
+            for a, b, c in pairs
+        )
+        figures[f"table error at {name}, ulp of the vector's size"] = worst
+    many = np.linspace(0.0, 1000 * period.value, 2_000_000)
+    room = np.empty((many.size, 3)), np.empty((many.size, 3)), np.empty(many.size)
+    table.fill(many, *room)
+    rate = many.size / _best(lambda: table.fill(many, *room), 5)
+    figures["table states per second"] = rate
+    times = np.linspace(0.0, _REVOLUTIONS * period.value, _REVOLUTIONS * _SAMPLES)
+    seconds, error = _dop853(times)
+    figures[f"DOP853, {_REVOLUTIONS:,} revolutions of {_SAMPLES} samples, s"] = seconds
+    figures["its largest position error, GM/c^2"] = error
+    at_hand = _best(lambda: table.at(times), 5)
+    figures["table at hand against it, times faster"] = seconds / at_hand
+    built = _best(lambda: build_table(_subject(), 0.0, 1.0).at(times))
+    figures["table with orbit and building, times faster"] = seconds / built
+
+
+def _size(vectors: npt.NDArray[np.float64]) -> npt.NDArray[np.float64]:
+    return np.asarray(np.linalg.norm(vectors, axis=1))
 
 
 def _process(*words: str) -> float:
@@ -72,7 +134,6 @@ def _process(*words: str) -> float:
 def measure() -> dict[str, float]:
     """All figures by name: rates per second, times in seconds, ratios."""
     from truefall.reference import Orbit
-    from truefall.reference.table import build_table
     from truefall.validate.formats import write_states
     from truefall.validate.orbit_file import parse_orbit
 
@@ -86,18 +147,7 @@ def measure() -> dict[str, float]:
     figures: dict[str, float] = {}
     figures["build orbit, s"] = _best(lambda: fresh().at([0.0, 100.0]))
     figures["certified states per second"] = times.size / _best(lambda: orbit.at(times))
-    figures["build table, s"] = _best(lambda: build_table(orbit, 0.0, 1.0))
-    table = build_table(orbit, 0.0, 1.0)
-    many = np.linspace(0.0, 3.48e5, 2_000_000)
-    table.at(many[:10])
-    figures["table states per second"] = many.size / _best(lambda: table.at(many))
-    seconds, error = _dop853(2000, 3480.0)
-    figures["DOP853 (compiled right-hand side), states per second"] = 2000 / seconds
-    figures["its position error at the end, GM/c^2"] = error
-    figures["table against it, times faster"] = (
-        figures["table states per second"]
-        / figures["DOP853 (compiled right-hand side), states per second"]
-    )
+    _table_figures(figures)
     with tempfile.TemporaryDirectory() as folder:
         spec = parse_orbit(
             {
@@ -116,8 +166,12 @@ def measure() -> dict[str, float]:
 
 
 def main() -> None:
-    """Measure and print."""
+    """Measure and print; ``--long`` adds files of ten million rows (some minutes, 1.5 GB)."""
     figures = measure()
+    if "--long" in sys.argv[1:]:
+        from truefall.validate.benchmarks_long import measure_long
+
+        figures |= measure_long()
     if "--json" in sys.argv[1:]:
         print(json.dumps(figures, indent=1))
         return

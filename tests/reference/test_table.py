@@ -102,3 +102,33 @@ def test_the_compiled_kernel_equals_its_interpreted_source():
         outputs.append(done.stdout)
 
     assert outputs[0] == outputs[1]
+
+
+def test_the_kernel_and_the_maker_agree_on_the_shape_of_the_pieces():
+    """Degree and overlap are written down twice, so that making a table loads no compiler."""
+    from truefall.reference import table, table_kernel
+
+    assert table_kernel.DEGREE == table._DEGREE
+    assert table_kernel.SLACK == table._SLACK
+
+
+def test_values_depend_on_the_time_alone():
+    """In order, reversed, shuffled, one by one, in two threads: the same bits, also at seams."""
+    orbit = Orbit(position=(10.0, 0, 0), velocity=(0, 0.34, 0.02))
+    period = orbit.radial_period.value
+    table = build_table(orbit, 0.0, 1.0)
+    rng = np.random.default_rng(4)
+    start = float(table.edges[0])
+    seams = start + np.arange(-3, 50) * period
+    times = np.concatenate(
+        [rng.uniform(-1e5, 1e6, 500), *(seams + d for d in (0.0, 1e-7, -1e-7, 4e-7, 1e-12))]
+    )
+    whole = table.at(times)
+    shuffled = rng.permutation(times.size)
+    for order in (np.arange(times.size)[::-1], shuffled):
+        for a, b in zip(whole, table.at(times[order]), strict=True):
+            assert np.array_equal(a[order], b)
+    for k in range(0, times.size, 7):
+        assert np.array_equal(table.at(times[k : k + 1])[0][0], whole[0][k])
+    many = np.tile(times, 200)
+    assert np.array_equal(table.at(many)[1][: times.size], whole[1])
