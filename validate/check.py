@@ -228,9 +228,13 @@ def exact_expected(orbit: Orbit, times: Floats) -> Expected:
 
 
 def check_trajectory(
-    trajectory: Trajectory, *, against: str | Path | None = None, fit: bool = False
+    trajectory: Trajectory,
+    *,
+    against: str | Path | None = None,
+    fit: bool = False,
+    orbit: Orbit | None = None,
 ) -> CheckResult:
-    """Judge one trajectory.
+    """Judge one trajectory; ``orbit``, where given, is that of its declared start, built before.
 
     Raises
     ------
@@ -250,7 +254,7 @@ def check_trajectory(
             return result
     spec = start.spec
     budget = parse_budget(trajectory.metadata.get("budget", {}), spec.system, trajectory.path)
-    orbit = exact_orbit(spec)
+    orbit = exact_orbit(spec) if orbit is None else orbit
     inside = orbit.reachable(trajectory.time)
     beyond, past = beyond_end(spec, orbit, trajectory, inside, start.half_units)
     result = CheckResult(
