@@ -73,6 +73,15 @@ class Guard:
         """The guard ``w``."""
         return self.bound + self.quantisation + self.rounding
 
+    def source(self, row: int) -> str:
+        """What most of the guard of a row comes from."""
+        parts = {
+            "reference bound": self.bound[row] + self.rounding[row],
+            "digits of the file": self.digits[row] + self.carried[row],
+            "time stamps": self.stamps[row],
+        }
+        return max(parts, key=lambda name: float(parts[name]))
+
     @property
     def quantisation(self) -> Floats:
         """The share of the file's own digits."""

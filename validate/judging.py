@@ -74,13 +74,7 @@ def floor_of(comparison: Comparison, limit: Floats) -> tuple[Floor, npt.NDArray[
         until = _crossing(comparison.time, guard.carried / limit, int(np.argmax(beyond)))
     shown = np.where(judged, guard.total, -1.0) if judged.any() else guard.total
     row = int(np.argmax(shown))
-    parts = {
-        "reference bound": guard.bound[row] + guard.rounding[row],
-        "digits of the file": guard.digits[row] + guard.carried[row],
-        "time stamps": guard.stamps[row],
-    }
-    source = max(parts, key=lambda name: float(parts[name]))
-    return Floor(float(guard.total[row]), source, until), judged
+    return Floor(float(guard.total[row]), guard.source(row), until), judged
 
 
 def _crossing(time: Floats, ratio: Floats, row: int) -> float:

@@ -93,6 +93,31 @@ def test_digits_of_the_first_row_are_carried(csv_of: Write) -> None:
     assert _check(csv_of(_orbit(), TIMES, digits=9, start=True)).floor.predictable_until is None  # type: ignore[union-attr]
 
 
+def test_an_unstable_circle_is_predictable_by_its_digits(csv_of: Write) -> None:
+    """Seventeen digits last longer than eight by ln(10^9)/lambda, up to the grid of samples.
+
+    The rate of the unstable circle at r: Cardoso et al. 2009, Phys. Rev. D 79, 064016 (from
+    memory): lambda = sqrt(M (6 M - r)/r^4) = 1/25 at r = 5, per coordinate time.
+    """
+    r = 5.0
+    rate = (6.0 - r) ** 0.5 / r**2
+    orbit = Orbit(position=(r, 0.0, 0.0), velocity=(0.0, r**-0.5, 0.0))
+    times = np.linspace(0.0, 1200.0, 1201)
+    ends = {}
+    for digits in (17, 8):
+        result = _check(csv_of(orbit, times, digits=digits), budget={"position": 1e-3})
+        assert result.verdict == "undecided"
+        ends[digits] = result.floor.predictable_until  # type: ignore[union-attr]
+    gained = ends[17] - ends[8]
+
+    assert gained == pytest.approx(np.log(1e9) / rate, rel=0.05)
+    over_time = _check(csv_of(orbit, times, digits=8)).as_json()["floor"]["over_time"]
+    assert over_time[0]["from"] == "digits of the file"
+    growth = np.diff(np.log([o["position"] for o in over_time[2:7]]))
+    steps = np.diff([o["time"] for o in over_time[2:7]])
+    assert growth / steps == pytest.approx(rate, rel=0.15)
+
+
 def test_an_error_before_the_predictable_end_still_fails(csv_of: Write) -> None:
     """A certain failure is a failure whatever comes later."""
     path = csv_of(_orbit(), TIMES, digits=9, change=_shift(1e-2))

@@ -163,8 +163,11 @@ KEYS: dict[str, Any] = {
         },
         "norm": {"max_drift": float, "slope": float, "guard": float},
     },
-    "floor": {"position": float, "from": str, "predictable_until": float},
-    "reference": {"kind": str, "bound": float, "certified_samples": int},
+    "floor": {"position": float, "from": str, "predictable_until": float, "over_time": list},
+    "reference": {
+        "kind": str, "bound": float, "certified_samples": int, "certified": str,
+        "table_error_by_bound": float,
+    },
     "growth": {"exponent": float, "kind": str},
     "ends": {
         "before": {"time": float, "reason": str}, "after": {"time": float, "reason": str}

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from itertools import pairwise
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -14,11 +15,13 @@ if TYPE_CHECKING:
     from collections.abc import Sequence
 
     from truefall.validate.check import CheckResult
+    from truefall.validate.compare import Comparison
     from truefall.validate.drift import Drift
 
 __all__ = ["document", "error_summary", "file_object", "summary_of"]
 
 Floats = npt.NDArray[np.float64]
+_STRETCHES = 24
 
 
 def _plain(value: Any) -> Any:
@@ -52,13 +55,45 @@ def error_summary(values: Floats | None, time: Floats) -> dict[str, float] | Non
     return {"max": largest, "rms": rms, "at_time": float(time[worst])}
 
 
-def summary_of(result: CheckResult, quantity: str, values: Floats | None) -> dict[str, float] | None:
+def summary_of(
+    result: CheckResult, quantity: str, values: Floats | None
+) -> dict[str, float] | None:
     """:func:`error_summary` of one quantity; of all rows, also where only some are in memory."""
     assert result.comparison is not None
     summary = error_summary(values, result.comparison.time)
     if summary is not None and result.totals is not None and quantity in result.totals.errors:
         summary["rms"] = result.totals.errors[quantity][1]
     return summary
+
+
+def _floor_over_time(comparison: Comparison) -> list[dict[str, Any]]:
+    """The largest position guard in a few dozen stretches of rows, and what most of it is."""
+    guard = comparison.position_guard
+    total = guard.total
+    cuts = np.unique(np.linspace(0, total.size, _STRETCHES + 1).astype(int))
+    found = []
+    for first, last in pairwise(cuts.tolist()):
+        row = first + int(np.argmax(total[first:last]))
+        found.append(
+            {
+                "time": float(comparison.time[row]),
+                "position": float(total[row]),
+                "from": guard.source(row),
+            }
+        )
+    return found
+
+
+def _certified(result: CheckResult) -> str:
+    """Which rows were held against enclosed values, in words."""
+    if result.reference != "exact":
+        return "none: the stored set's own bounds count"
+    if result.totals is None:
+        return "every row"
+    return (
+        f"{result.certified} of {result.samples} rows, among them the largest errors, the rows "
+        f"that the table leaves open and {result.totals.random} at random; the others by the table"
+    )
 
 
 def _orbit(result: CheckResult) -> dict[str, Any] | None:
@@ -176,11 +211,14 @@ def file_object(result: CheckResult) -> dict[str, Any]:
             "position": floor.position if floor else None,
             "from": floor.source if floor else None,
             "predictable_until": floor.predictable_until if floor else None,
+            "over_time": _floor_over_time(comparison),
         }
         found["reference"] = {
             "kind": result.reference,
             "bound": float(np.max(comparison.position_guard.bound)),
             "certified_samples": result.certified,
+            "certified": _certified(result),
+            "table_error_by_bound": result.totals.table_share if result.totals else None,
         }
         growth = result.growth
         found["growth"] = {

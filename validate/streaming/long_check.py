@@ -38,7 +38,7 @@ if TYPE_CHECKING:
     from truefall.reference import Orbit
     from truefall.reference.table import Table
     from truefall.validate.budget import Budget
-    from truefall.validate.compare import Comparison
+    from truefall.validate.compare import Comparison, Expected
     from truefall.validate.drift import Drift
     from truefall.validate.starts import Start
     from truefall.validate.trajectory import Trajectory
@@ -167,6 +167,7 @@ def _judged_rows(
     always = np.searchsorted(screened.rows, plan.always)
     rows = decisive_rows(rough, margins_of(rough, budget), always)
     expected = replaced(tabled, rows, exact_expected(orbit, kept.time[rows]))
+    share = _table_share(tabled, expected, rows)
     comparison = _with_slopes(compared(kept, start, orbit, expected), screened.slopes)
     light = spec.particle == "light"
     limit = position_tolerance(comparison, budget, radius_of(spec, expected))
@@ -184,8 +185,26 @@ def _judged_rows(
         expected=expected, comparison=comparison, judgements=tuple(judgements),
         tolerances=budget.flat(), floor=floor,
         growth=growth_of(kept.time, comparison.distance, guard, spec.start_time),
-        totals=Totals(screened.rows, screened.errors, screened.slopes, *ends),
+        totals=Totals(
+            screened.rows, screened.errors, screened.slopes, *ends, _RANDOM, share
+        ),
     )  # fmt: skip
+
+
+def _table_share(tabled: Expected, exact: Expected, rows: npt.NDArray[np.int64]) -> float:
+    """Largest position error of the table at rows that are known exactly, by its bound.
+
+    Raises
+    ------
+    ArithmeticError
+        If the table's bound does not hold there: then nothing that rests on it may be reported.
+    """
+    error = (tabled.position[rows] - exact.position[rows]) - exact.position_low[rows]
+    bound = np.linalg.norm(tabled.position_bound[rows], axis=1)
+    share = float(np.max(np.linalg.norm(error, axis=1) / bound))
+    if share > 1:
+        raise ArithmeticError(f"the table of this orbit is {share:.2g} times its bound off")
+    return share
 
 
 def _with_slopes(comparison: Comparison, slopes: Mapping[str, float]) -> Comparison:

@@ -25,6 +25,11 @@ class Totals:
         Of the drifts, per unit of time.
     first, last : int
         Rows of the file that were compared (last excluded).
+    random : int
+        Rows chosen at random among those that were held against enclosed values.
+    table_share : float
+        Largest position error of the table among those rows, by the bound it promises (at most
+        1, or the promise is broken).
     """
 
     rows: npt.NDArray[np.int64]
@@ -32,3 +37,5 @@ class Totals:
     slopes: Mapping[str, float]
     first: int
     last: int
+    random: int
+    table_share: float
