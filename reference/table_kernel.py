@@ -108,6 +108,46 @@ def _turned(frame: Floats, low: Floats, angle: Floats, out: Floats) -> None:
 
 
 @njit(cache=True, error_model="numpy", nogil=True)
+def _values(coefficients: Floats, index: int, x: float) -> tuple[float, float, float, float, float]:
+    """The five polynomials of a piece at ``x``."""
+    # c0 + x q(x), the even and odd powers of q apart: two short chains in place of a long one,
+    # and all but the last sum rounds quantities that are small beside c0
+    square = x * x
+    a = coefficients[index, DEGREE, 0]
+    a2 = coefficients[index, DEGREE - 1, 0]
+    b = coefficients[index, DEGREE, 1]
+    b2 = coefficients[index, DEGREE - 1, 1]
+    va = coefficients[index, DEGREE, 2]
+    va2 = coefficients[index, DEGREE - 1, 2]
+    vb = coefficients[index, DEGREE, 3]
+    vb2 = coefficients[index, DEGREE - 1, 3]
+    tau = coefficients[index, DEGREE, 4]
+    tau2 = coefficients[index, DEGREE - 1, 4]
+    for k in range(DEGREE - 2, 1, -2):
+        a = a * square + coefficients[index, k, 0]
+        a2 = a2 * square + coefficients[index, k - 1, 0]
+        b = b * square + coefficients[index, k, 1]
+        b2 = b2 * square + coefficients[index, k - 1, 1]
+        va = va * square + coefficients[index, k, 2]
+        va2 = va2 * square + coefficients[index, k - 1, 2]
+        vb = vb * square + coefficients[index, k, 3]
+        vb2 = vb2 * square + coefficients[index, k - 1, 3]
+        tau = tau * square + coefficients[index, k, 4]
+        tau2 = tau2 * square + coefficients[index, k - 1, 4]
+    a = (a * square + coefficients[index, 1, 0]) + x * a2
+    a = coefficients[index, 0, 0] + (x * a + coefficients[index, DEGREE + 1, 0])
+    b = (b * square + coefficients[index, 1, 1]) + x * b2
+    b = coefficients[index, 0, 1] + (x * b + coefficients[index, DEGREE + 1, 1])
+    va = (va * square + coefficients[index, 1, 2]) + x * va2
+    va = coefficients[index, 0, 2] + (x * va + coefficients[index, DEGREE + 1, 2])
+    vb = (vb * square + coefficients[index, 1, 3]) + x * vb2
+    vb = coefficients[index, 0, 3] + (x * vb + coefficients[index, DEGREE + 1, 3])
+    tau = (tau * square + coefficients[index, 1, 4]) + x * tau2
+    tau = coefficients[index, 0, 4] + (x * tau + coefficients[index, DEGREE + 1, 4])
+    return a, b, va, vb, tau
+
+
+@njit(cache=True, error_model="numpy", nogil=True)
 def fill(
     times: Floats,
     start: float,
@@ -172,40 +212,7 @@ def fill(
             low += rest - back_low
         index = _find(edges, high, index)
         x = ((high - centres[index]) + low) * scales[index]
-        # c0 + x q(x), the even and odd powers of q apart: two short chains in place of a long one,
-        # and all but the last sum rounds quantities that are small beside c0
-        square = x * x
-        a = coefficients[index, DEGREE, 0]
-        a2 = coefficients[index, DEGREE - 1, 0]
-        b = coefficients[index, DEGREE, 1]
-        b2 = coefficients[index, DEGREE - 1, 1]
-        va = coefficients[index, DEGREE, 2]
-        va2 = coefficients[index, DEGREE - 1, 2]
-        vb = coefficients[index, DEGREE, 3]
-        vb2 = coefficients[index, DEGREE - 1, 3]
-        tau = coefficients[index, DEGREE, 4]
-        tau2 = coefficients[index, DEGREE - 1, 4]
-        for k in range(DEGREE - 2, 1, -2):
-            a = a * square + coefficients[index, k, 0]
-            a2 = a2 * square + coefficients[index, k - 1, 0]
-            b = b * square + coefficients[index, k, 1]
-            b2 = b2 * square + coefficients[index, k - 1, 1]
-            va = va * square + coefficients[index, k, 2]
-            va2 = va2 * square + coefficients[index, k - 1, 2]
-            vb = vb * square + coefficients[index, k, 3]
-            vb2 = vb2 * square + coefficients[index, k - 1, 3]
-            tau = tau * square + coefficients[index, k, 4]
-            tau2 = tau2 * square + coefficients[index, k - 1, 4]
-        a = (a * square + coefficients[index, 1, 0]) + x * a2
-        a = coefficients[index, 0, 0] + (x * a + coefficients[index, DEGREE + 1, 0])
-        b = (b * square + coefficients[index, 1, 1]) + x * b2
-        b = coefficients[index, 0, 1] + (x * b + coefficients[index, DEGREE + 1, 1])
-        va = (va * square + coefficients[index, 1, 2]) + x * va2
-        va = coefficients[index, 0, 2] + (x * va + coefficients[index, DEGREE + 1, 2])
-        vb = (vb * square + coefficients[index, 1, 3]) + x * vb2
-        vb = coefficients[index, 0, 3] + (x * vb + coefficients[index, DEGREE + 1, 3])
-        tau = (tau * square + coefficients[index, 1, 4]) + x * tau2
-        tau = coefficients[index, 0, 4] + (x * tau + coefficients[index, DEGREE + 1, 4])
+        a, b, va, vb, tau = _values(coefficients, index, x)
         for k in range(3):
             low_part = turned[k, 0, 1] * a + turned[k, 1, 1] * b
             position[row, k] = turned[k, 0, 0] * a + (turned[k, 1, 0] * b + low_part)
