@@ -45,6 +45,8 @@ _EPS = float(np.finfo(np.float64).eps)
 _SPREAD = 0.25
 #: The same of velocities: more than half, which is what one that rises from rest has.
 _SPREAD_OF_SPEED = 0.6
+#: Share of a piece's largest speed below which its errors are no longer relative to the speed.
+_AT_REST = 0.4
 #: Rounding of the evaluation in the same units: reduction, Horner's rule, rotation (measured).
 _ROUNDING = 3.5
 
@@ -61,6 +63,9 @@ class Table:
         Largest error of position, velocity and clock seen at the check points, relative to the
         vector's size (clock: to the largest reading of its interval), plus the rounding of the
         evaluation: what a bound on the table's values is made of.
+    slow : float
+        Least speed that a velocity's error is relative to; 0 unless a piece holds speeds that
+        differ by more than 2.5 times, as where an orbit comes to rest.
     """
 
     start: float
@@ -75,6 +80,7 @@ class Table:
     frame: Floats
     frame_low: Floats
     error: Floats
+    slow: float
 
     def at(self, times: npt.ArrayLike) -> tuple[Floats, Floats, Floats]:
         """Position (n, 3), velocity (n, 3), clock (n,) in the orbit's units.
@@ -108,10 +114,6 @@ class Table:
             job.result()
         return position, velocity, clock
 
-    def fastest(self) -> float:
-        """Largest speed at the middle of a piece: the measure where a speed passes zero."""
-        return float(np.linalg.norm(self.coefficients[:, 0, 2:4], axis=1).max())
-
     def clock_width(self) -> float:
         """Largest change of the second clock over a piece, against which its error counts."""
         return float(2 * np.abs(self.coefficients[:, 1:-1, 4]).sum(axis=1).max())
@@ -144,6 +146,7 @@ class _Fitter:
         for j, row in enumerate(basis):
             self.to_powers[: row.size, j] = row
         self.worst = np.zeros(3)
+        self.slow = 0.0
 
     def fit(self, low: float, high: float) -> Floats | None:
         """Coefficients (d + 2, 5) on an interval, or None if the fit is not good enough."""
@@ -180,6 +183,9 @@ class _Fitter:
         if np.any(relative > _GOAL * _EPS) or moved > _SPREAD or turned > _SPREAD_OF_SPEED:
             return None
         self.worst = np.maximum(self.worst, relative)
+        speeds = np.hypot(words[:, 2, 0], words[:, 3, 0])
+        if speeds.min() < _AT_REST * speeds.max():
+            self.slow = max(self.slow, _AT_REST * float(speeds.max()))
         total = powers[0] + base  # whose rounding is kept as a last row
         rest = powers[0] - (total - base)
         powers[0] = total
@@ -190,7 +196,7 @@ class _Fitter:
         # hypot: the squares of speeds that die out exponentially would vanish
         position = np.hypot(values[:, 0], values[:, 1]).min()
         speeds = np.hypot(values[:, 2], values[:, 3])
-        velocity = max(speeds.min(), 0.4 * speeds.max())  # it may pass through zero
+        velocity = max(speeds.min(), _AT_REST * speeds.max())  # it may pass through zero
         clock = np.abs(values[:, 4]).max() + np.ptp(values[:, 4])
         return np.array([position, max(velocity, 1e-300), max(clock, 1e-300)])
 
@@ -251,6 +257,7 @@ def build_table(orbit: Orbit, first: float, last: float) -> Table:
         frame=frame,
         frame_low=frame_low,
         error=2 * fitter.worst + _ROUNDING * _EPS,
+        slow=fitter.slow,
     )
 
 

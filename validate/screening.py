@@ -62,7 +62,7 @@ def tabled_expected(orbit: Orbit, table: Table, times: Floats) -> Expected:
     # the clock's error is measured against its piece's readings, at most twice the width off
     width = table.clock_width()
     speeds = np.linalg.norm(velocity, axis=1)
-    fastest = np.maximum(speeds, 1e-3 * table.fastest())[:, None]
+    fastest = np.maximum(speeds, table.slow)[:, None]
     return Expected(
         position=position,
         position_low=np.zeros_like(position),

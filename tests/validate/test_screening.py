@@ -7,7 +7,7 @@ import pytest
 
 from truefall.reference import Orbit
 from truefall.validate.check import check_file
-from truefall.validate.screening import MANY_ROWS
+from truefall.validate.screening import MANY_ROWS, table_of, tabled_expected
 
 HEAD = {"system": "geometric", "particle": "massive", "chart": "areal", "clock": "coordinate"}
 
@@ -69,3 +69,36 @@ def test_revolutions_counted_by_the_table_are_those_of_the_orbit(exact_file):
     rows = result.totals.rows
     assert rows.size > 4000
     assert np.abs(result.comparison.revolutions - np.abs(states.winding[rows])).max() < 0.01
+
+
+@pytest.mark.parametrize(
+    "keys",
+    [
+        {"chart": "kerr-schild", "position": (8.0, 0, 0), "velocity": (0, 0, 0)},
+        {"position": (12.0, 3, 1), "velocity": (0.01, 0.2, 0.02)},
+        {"chart": "harmonic", "position": (150.0, 0, 0), "velocity": (-0.4, 0.034, 0)},
+        {
+            "system": "SI", "gm": 1.32712440018e20, "particle": "light",
+            "position": (-1.5e11, 7e8, 0), "velocity": (1.0, 0, 0),
+        },
+    ],
+    ids=["from rest", "bound", "flyby", "light, SI"],
+)  # fmt: skip
+def test_the_bounds_of_a_table_hold_for_position_velocity_and_clock(keys):
+    """Also where the orbit is at rest, and in units in which lengths and times differ by c."""
+    orbit = Orbit(**keys)
+    last = 1000.0 if orbit.system == "SI" else 25.0
+    times = np.sort(np.random.default_rng(8).uniform(0.0, last, 1500))
+    true = orbit.at(times)
+    table = table_of(orbit, 0.0, last)
+    found = tabled_expected(orbit, table, times)
+    reading = true.affine if true.proper_time is None else true.proper_time
+    low = true.affine_low if true.proper_time is None else true.proper_time_low
+
+    for got, high, rest, bound in (
+        (found.position, true.position, true.position_low, found.position_bound),
+        (found.velocity, true.velocity, true.velocity_low, found.velocity_bound),
+    ):
+        error = np.linalg.norm((got - high) - rest, axis=1)
+        assert np.all(error <= np.linalg.norm(bound, axis=1))
+    assert np.all(np.abs((found.clock - reading) - low) <= found.clock_bound)

@@ -95,7 +95,7 @@ def _shares(table: Table, span: float) -> Floats:
     """The table's bounds as the kernel takes them, and 1 by the span of the times."""
     root = float(np.sqrt(3.0))  # a bound for every component, and the length of three of them
     position, velocity, clock = (float(e) for e in table.error)
-    slowest, width = 1e-3 * table.fastest(), 2 * table.clock_width()
+    slowest, width = table.slow, 2 * table.clock_width()
     inverse = 1.0 / span if span > 0 else 1.0
     return np.array([position * root, velocity * root, slowest, clock, width, inverse])
 
