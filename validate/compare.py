@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from dataclasses import dataclass, fields, is_dataclass, replace
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
@@ -14,7 +14,7 @@ if TYPE_CHECKING:
     from truefall.validate.carry import Spread
     from truefall.validate.trajectory import Trajectory
 
-__all__ = ["Comparison", "Expected", "Guard", "compare"]
+__all__ = ["Comparison", "Expected", "Guard", "compare", "picked"]
 
 Floats = npt.NDArray[np.float64]
 #: Rounding of a computed difference and its norm, relative to it (five roundings, 2^-52 each).
@@ -114,6 +114,21 @@ class Comparison:
     def distance(self) -> Floats:
         """Size of the position error, (n,)."""
         return np.asarray(np.linalg.norm(self.position_error, axis=1))
+
+
+def picked(comparison: Comparison, rows: npt.NDArray[np.int64]) -> Comparison:
+    """The comparison of some rows."""
+    total = comparison.time.size
+
+    def pick(thing: Any) -> Any:
+        if isinstance(thing, np.ndarray) and thing.shape[:1] == (total,):
+            return thing[rows]
+        if is_dataclass(thing) and not isinstance(thing, type):
+            return replace(thing, **{f.name: pick(getattr(thing, f.name)) for f in fields(thing)})
+        return thing
+
+    found: Comparison = pick(comparison)
+    return found
 
 
 def _row_norm(values: Floats, n: int) -> Floats:

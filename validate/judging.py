@@ -138,8 +138,10 @@ def judgements_of(
 def whole_file(
     judgements: Sequence[Judgement],
     rough: Sequence[Judgement],
+    proven: Sequence[Judgement],
     counts: npt.NDArray[np.int64],
     rows: npt.NDArray[np.int64],
+    certified: npt.NDArray[np.int64],
     total: int,
 ) -> list[Judgement]:
     """Judgements of some rows of a long file, told of all its rows.
@@ -148,6 +150,9 @@ def whole_file(
     ----------
     judgements, rough : sequence of Judgement
         Of the rows in memory, by exact and by table values.
+    proven : sequence of Judgement
+        Of the rows with exact values alone, ``rows[certified]`` in the file: where they have the
+        outcome of the whole, the worst of them is the row that is reported.
     counts : (m, 3)
         All rows by their outcome against the table: pass, open, fail; those not judged left out.
     rows : (k,)
@@ -156,8 +161,8 @@ def whole_file(
         Rows compared.
     """
     found = []
-    for exact, table, (passes, open_, fails) in zip(
-        judgements, rough, counts.tolist(), strict=True
+    for exact, table, proof, (passes, open_, fails) in zip(
+        judgements, rough, proven, counts.tolist(), strict=True
     ):
         unjudged = total - passes - open_ - fails
         # rows in memory count by their exact outcome, all others by the table's
@@ -166,9 +171,12 @@ def whole_file(
         failing = exact.failing_rows + max(0, fails - table.failing_rows)
         settled = undecided == 0 and unjudged == 0
         outcome = "fail" if failing else "pass" if settled else "undecided"
+        shown, row = exact, int(rows[exact.row])
+        if proof.outcome == outcome:
+            shown, row = proof, int(rows[certified[proof.row]])
         found.append(
             replace(
-                exact, outcome=outcome, row=int(rows[exact.row]),
+                shown, outcome=outcome, row=row,
                 undecided_rows=undecided + unjudged, failing_rows=failing,
                 unjudged_rows=unjudged,
             )

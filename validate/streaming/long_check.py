@@ -20,6 +20,7 @@ from truefall.validate.check import (
     radius_of,
     verdict_of,
 )
+from truefall.validate.compare import picked
 from truefall.validate.growth import growth_of
 from truefall.validate.judging import (
     floor_of,
@@ -175,7 +176,8 @@ def _judged_rows(
     judgements = whole_file(
         judgements_of(comparison, budget, judged, kept.path, light),
         judgements_of(rough, budget, judged, kept.path, light),
-        screened.counts, screened.rows, ends[1] - ends[0],
+        judgements_of(picked(comparison, rows), budget, judged[rows], kept.path, light),
+        screened.counts, screened.rows, rows, ends[1] - ends[0],
     )  # fmt: skip
     beyond, past = result.verdict, result.reason
     verdict, reason = verdict_of(kept, result.samples, start, judgements, beyond, past)
