@@ -6,6 +6,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 
 from truefall.integrators.methods import Method, Parts, Problem
+from truefall.integrators.symplectic.index_entries import methods as symplectic_methods
 
 __all__ = ["EQUATIONS", "METHODS", "VARIABLES", "Equations"]
 
@@ -148,5 +149,6 @@ METHODS: Mapping[str, Method] = {
             "Everhart 1985; Rein & Spiegel 2015, MNRAS 446, 1424", _gauss_radau,
         ),
         *(_gauss(order) for order in range(2, 17, 2)),
+        *symplectic_methods(),
     )
 }  # fmt: skip

@@ -1,0 +1,1 @@
+"""Symplectic methods: splittings, extended phase space, time-transformed leapfrog."""
