@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING, Any, NoReturn
 
 import click
 
-from truefall.validate.cli_parts import Commands, finite_number, show_versions
+from truefall.validate.cli_parts import Commands, finite_number, show_versions, with_causes
 from truefall.validate.errors import InputError, UsageError
 from truefall.validate.terminal import prepare_streams, say, silence, working
 
@@ -86,7 +86,7 @@ def _declarations(command: Callable[..., int]) -> Callable[..., int]:
 @click.option("--report", metavar="DIR", help="Write report.txt, report.json and pictures there.")
 @click.option("--json", "as_json", is_flag=True, help="One JSON document on stdout.")
 @click.option("--fit", is_flag=True, help="Find the start that fits the file best.")
-@click.option("--explain", is_flag=True, help="Describe the residual in words.")
+@click.option("--explain", is_flag=True, help="Look for causes of a residual within budget too.")
 @_declarations
 def check(
     files: tuple[str, ...],
@@ -124,6 +124,7 @@ def check(
         with working(f"checking {path}{count}"):
             found, fault = _check_one(path, given)
         faulty = faulty or fault
+        found = [with_causes(result, always=explain) for result in found]
         results += found
         for result in found:
             _show(result, explain=explain, err=as_json)
@@ -164,6 +165,9 @@ def _show(result: CheckResult, *, explain: bool, err: bool) -> None:
     text = render(result)
     if explain:
         text += "\n" + explain_residual(result)
+        said = result.explanation
+        if said is not None and said.description and not said.unexplained:
+            text += "\n" + f"  causes    {said.description}"
     say(text, err=err, colour=VERDICTS[result.verdict][1])
 
 
@@ -332,6 +336,32 @@ def inspect(path: str, verify: int, as_json: bool) -> int:
     if as_json:
         say(json.dumps(found.as_json(), indent=1))
     return 0 if found.conforms else 1
+
+
+@cli.command()
+@click.argument("suite", required=False, metavar="SUITE.toml")
+@click.option("--json", "as_json", is_flag=True, help="One JSON document on stdout.")
+@click.option("--out", metavar="DIR", help="Where the nights are kept (SUITE-nights beside it).")
+@click.option("--cluster", metavar="ADDRESS", help="Run the cases on a Dask cluster.")
+@click.option("--jobs", type=click.IntRange(min=1), metavar="N", help="Cases at a time.")
+@click.option("--rebuild", is_flag=True, help="Make figures and pages again from the nights.")
+@click.option("--accept", multiple=True, metavar="CASE", help="Last night's figures are right.")
+@click.option(
+    "--init",
+    is_flag=False,
+    flag_value=".",
+    metavar="[DIR]",
+    help="Write a commented suite and adaptors in Python, C and Fortran.",
+)
+@click.option(
+    "--undecided", type=click.Choice(("error", "skip", "pass")), default="error",
+    help="What a case counts as that cannot be settled.",
+)  # fmt: skip
+def nightly(suite: str | None, **options: Any) -> int:
+    """Run propagators over cases, record, judge, compare with the past, report."""
+    from truefall.validate.nightly.command import nightly_command
+
+    return nightly_command(suite, **options)
 
 
 def _fault(error: BaseException) -> str:

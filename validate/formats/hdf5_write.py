@@ -12,7 +12,7 @@ import numpy.typing as npt
 from truefall.validate.formats.hdf5_digest import content_digest
 from truefall.validate.trajectory import SERIES
 
-__all__ = ["FORMAT", "FORMAT_VERSION", "write"]
+__all__ = ["FORMAT", "FORMAT_VERSION", "ascii_text", "put_trajectory", "write"]
 
 FORMAT, FORMAT_VERSION = "truefall-result-set", "1"
 _CHUNK_ROWS = 8192
@@ -30,7 +30,7 @@ Floats = npt.NDArray[np.float64]
 Words = tuple[float, float | None, float]
 
 
-def _text(value: str) -> np.bytes_:
+def ascii_text(value: str) -> np.bytes_:
     """Fixed-length ASCII with a NUL: the only string that C and Fortran read without care."""
     return np.bytes_(value.encode("ascii", "backslashreplace") + b"\0")
 
@@ -75,7 +75,7 @@ def _long_name(name: str) -> str:
 def _attributes(group: Any, attributes: Mapping[str, Any]) -> None:
     for key, value in sorted(attributes.items()):
         if isinstance(value, str):
-            group.attrs[key] = _text(value)
+            group.attrs[key] = ascii_text(value)
         else:
             group.attrs[key] = np.asarray(value, dtype="<f8")
 
@@ -92,8 +92,8 @@ def _dataset(group: Any, name: str, values: Floats, unit: str) -> Any:
         fletcher32=True,
         track_times=False,
     )
-    dataset.attrs["units"] = _text(unit)
-    dataset.attrs["long_name"] = _text(_long_name(name))
+    dataset.attrs["units"] = ascii_text(unit)
+    dataset.attrs["long_name"] = ascii_text(_long_name(name))
     return dataset
 
 
@@ -101,8 +101,8 @@ def _series(group: Any, series: Mapping[str, Floats], units: Mapping[str, str]) 
     time = _dataset(group, "time", series["time"], units["time"])
     time.make_scale("time")
     component = group.create_dataset("component", data=np.arange(3, dtype="<i4"))
-    component.attrs["units"] = _text("1")
-    component.attrs["long_name"] = _text("Cartesian component: 0 x, 1 y, 2 z")
+    component.attrs["units"] = ascii_text("1")
+    component.attrs["long_name"] = ascii_text("Cartesian component: 0 x, 1 y, 2 z")
     component.make_scale("component")
     for name in (
         base + suffix for base in (*SERIES[1:], "azimuth") for suffix in ("", "_low", "_bound")
@@ -123,7 +123,27 @@ def _invariants(group: Any, invariants: Mapping[str, Words], units: Mapping[str,
             if value is None:
                 continue
             scalar = inner.create_dataset(name + suffix, data=np.float64(value))
-            scalar.attrs["units"] = _text(units.get(name, "1"))
+            scalar.attrs["units"] = ascii_text(units.get(name, "1"))
+
+
+def put_trajectory(
+    holder: Any,
+    name: str,
+    attributes: Mapping[str, Any],
+    series: Mapping[str, Floats],
+    invariants: Mapping[str, Words],
+) -> None:
+    """Make the group of one trajectory in an open file; see :func:`write`.
+
+    ``series`` may be empty, for a trajectory of which there are words only.
+    """
+    units = _units(str(attributes["system"]))
+    group = holder.create_group(name)
+    _attributes(group, attributes)
+    if series:
+        _series(group, series, units)
+    if invariants:
+        _invariants(group, invariants, units)
 
 
 def write(
@@ -156,18 +176,13 @@ def write(
     """
     import h5py
 
-    units = _units(str(attributes["system"]))
     with h5py.File(path, "w", libver=("v108", "v110")) as file:
-        group = file.create_group("trajectory").create_group(name)
-        _attributes(group, attributes)
-        _series(group, series, units)
-        if invariants:
-            _invariants(group, invariants, units)
-        file.attrs["format"] = _text(FORMAT)
-        file.attrs["format_version"] = _text(FORMAT_VERSION)
-        file.attrs["producer"] = _text(producer)
-        file.attrs["created"] = _text(created)
-        file.attrs["content_digest"] = _text(content_digest(file))
+        put_trajectory(file.create_group("trajectory"), name, attributes, series, invariants)
+        file.attrs["format"] = ascii_text(FORMAT)
+        file.attrs["format_version"] = ascii_text(FORMAT_VERSION)
+        file.attrs["producer"] = ascii_text(producer)
+        file.attrs["created"] = ascii_text(created)
+        file.attrs["content_digest"] = ascii_text(content_digest(file))
     with h5py.File(path, "r") as file:
         stored = file["trajectory"][name]
         for key, values in series.items():

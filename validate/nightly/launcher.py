@@ -125,7 +125,8 @@ def _watch(link: socket.socket, woken: int, pid: int) -> tuple[int, Any, bool]:
     there = True
     done, status, usage = os.wait4(pid, os.WNOHANG)
     while not done:
-        ready, _, _ = select.select([link, woken] if there else [woken], [], [], 1.0)
+        listening: list[Any] = [woken, link] if there else [woken]
+        ready, _, _ = select.select(listening, [], [], 1.0)
         if woken in ready:
             os.read(woken, 512)
         if link in ready:

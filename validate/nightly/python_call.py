@@ -74,7 +74,7 @@ def call(name: str, suite: str, orbit_path: str, out: str) -> int:
         kind = type(returned).__name__
         count = f" of {len(returned)}" if isinstance(returned, tuple | list) else ""
         return _refuse(out, f"{name} returned {kind}{count}; {wanted}", _WRONG_RESULT)
-    arrays = {}
+    arrays: dict[str, Any] = {}
     for label, values in zip(_NAMES, returned, strict=True):
         try:
             arrays[label] = np.asarray(values, dtype=np.float64)

@@ -6,14 +6,14 @@ import difflib
 import fnmatch
 import hashlib
 import json
-import math
 import re
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from truefall.validate.errors import InputError, UsageError
+from truefall.validate.nightly.suite_reader import SuiteReader
 
 if TYPE_CHECKING:
     from truefall.validate.orbit_file import OrbitSpec
@@ -30,8 +30,6 @@ _RUN = ("repeat",)
 _READS, _WRITES = ("toml", "json"), ("csv", "h5", "npz")
 _NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9._-]*", re.ASCII)
 _FUNCTION = re.compile(r"[^\W\d]\w*(\.[^\W\d]\w*)*:[^\W\d]\w*(\.[^\W\d]\w*)*")
-_SIZE = re.compile(r"([0-9.]+)\s*(kB|MB|GB|TB)", re.ASCII)
-_SIZES = {"kB": 10**3, "MB": 10**6, "GB": 10**9, "TB": 10**12}
 _PLACEHOLDERS = ("{orbit}", "{out}")
 
 
@@ -92,7 +90,7 @@ class Suite:
     path: Path
     propagators: tuple[Propagator, ...]
     cases: tuple[SuiteCase, ...]
-    thresholds: Thresholds = Thresholds()
+    thresholds: Thresholds = field(default_factory=Thresholds)
     code_folder: Path | None = None
     commit: str | None = None
     repeat: int = 1
@@ -114,95 +112,6 @@ class Suite:
         return [f"{p.name}/{c.name}" for p, c in self.pairs()]
 
 
-class _Reader:
-    """The text of a suite file, to say on which line something is wrong."""
-
-    def __init__(self, path: Path) -> None:
-        self.path = path
-        from truefall.validate.orbit_file import read_mapping
-
-        try:
-            self.table = read_mapping(path)
-            self.lines = path.read_text("utf-8-sig").splitlines()
-        except InputError as error:
-            raise UsageError(str(error)) from None
-
-    def wrong(self, sentence: str, table: str = "", key: str = "") -> UsageError:
-        """The error, with the line of the key, or of the table's header."""
-        line = self._line(table, key)
-        where = f"{self.path}, line {line}" if line else str(self.path)
-        return UsageError(f"{where}: {sentence}")
-
-    def _line(self, table: str, key: str) -> int:
-        header = ""
-        found = 0
-        for number, line in enumerate(self.lines, 1):
-            match = re.match(r"\s*\[([^\]]*)\]", line)
-            if match:
-                header = match[1].replace('"', "").replace("'", "").replace(" ", "")
-                if header == table:
-                    found = number
-            elif (
-                header == table and key and re.match(rf"\s*[\"']?{re.escape(key)}[\"']?\s*=", line)
-            ):
-                return number
-        return found
-
-    def known(self, given: Any, names: Sequence[str], table: str) -> Mapping[str, Any]:
-        """The table, if it is one and has no unknown keys."""
-        label = f"[{table}]" if table else "the suite"
-        if not isinstance(given, Mapping):
-            raise self.wrong(f"{label} must be a table, not {given!r}", table)
-        for key in given:
-            if key not in names:
-                near = difflib.get_close_matches(str(key), names, n=1)
-                hint = f"; did you mean {near[0]!r}?" if near else f"; known are {', '.join(names)}"
-                raise self.wrong(f"unknown key {key!r} in {label}{hint}", table, str(key))
-        return given
-
-    def number(self, table: str, given: Mapping[str, Any], key: str, default: float) -> float:
-        """A positive finite number."""
-        value = given.get(key, default)
-        if (
-            isinstance(value, bool)
-            or not isinstance(value, int | float)
-            or not 0 < value < math.inf
-        ):
-            raise self.wrong(f"{key} must be a positive number, not {value!r}", table, key)
-        return float(value)
-
-    def texts(self, table: str, given: Mapping[str, Any], key: str) -> tuple[str, ...]:
-        """A list of texts, none of them empty."""
-        value = given[key]
-        if (
-            not isinstance(value, list)
-            or not value
-            or not all(isinstance(v, str) and v and "\0" not in v for v in value)
-        ):
-            raise self.wrong(f"{key} must be a list of texts, not {value!r}", table, key)
-        return tuple(value)
-
-    def size(
-        self, table: str, given: Mapping[str, Any], key: str, default: int | None
-    ) -> int | None:
-        """A size in bytes."""
-        if key not in given:
-            return default
-        value = given[key]
-        if value == "none":
-            return None
-        match = _SIZE.fullmatch(value) if isinstance(value, str) else None
-        try:
-            size = int(float(match[1]) * _SIZES[match[2]]) if match else 0
-        except ValueError:
-            size = 0
-        if size <= 0:
-            raise self.wrong(
-                f'{key} must be a size such as "512 MB", or "none", not {value!r}', table, key
-            )
-        return size
-
-
 def read_suite(path: str | Path) -> Suite:
     """Read and check a suite file.
 
@@ -212,7 +121,7 @@ def read_suite(path: str | Path) -> Suite:
         One sentence: file, line, what is wrong, what is allowed.
     """
     path = Path(path)
-    reader = _Reader(path)
+    reader = SuiteReader(path)
     given = reader.known(reader.table, _TOP, "")
     name = given.get("name", path.stem)
     if not isinstance(name, str) or not name or not name.isprintable():
@@ -252,7 +161,7 @@ def read_suite(path: str | Path) -> Suite:
     return suite
 
 
-def _thresholds(reader: _Reader, alarms: Mapping[str, Any]) -> Thresholds:
+def _thresholds(reader: SuiteReader, alarms: Mapping[str, Any]) -> Thresholds:
     usual = Thresholds()
     found = Thresholds(
         reader.number("alarms", alarms, "growth", usual.growth),
@@ -269,14 +178,14 @@ def _thresholds(reader: _Reader, alarms: Mapping[str, Any]) -> Thresholds:
     return found
 
 
-def _code_folder(reader: _Reader, path: Path, code: Mapping[str, Any]) -> Path:
+def _code_folder(reader: SuiteReader, path: Path, code: Mapping[str, Any]) -> Path:
     value = code.get("folder", ".")
     if not isinstance(value, str) or not value or not (path.parent / value).is_dir():
         raise reader.wrong(f"folder {value!r} is no folder beside the suite", "code", "folder")
     return (path.absolute().parent / value).resolve()
 
 
-def _propagator(reader: _Reader, name: str, given: Any) -> Propagator:
+def _propagator(reader: SuiteReader, name: str, given: Any) -> Propagator:
     label = f"propagator.{name}"
     if not _NAME.fullmatch(name):
         raise reader.wrong(
@@ -329,7 +238,7 @@ def _propagator(reader: _Reader, name: str, given: Any) -> Propagator:
     )  # fmt: skip
 
 
-def _cases(reader: _Reader, given: Mapping[str, Any]) -> list[SuiteCase]:
+def _cases(reader: SuiteReader, given: Mapping[str, Any]) -> list[SuiteCase]:
     from truefall.validate.cases import load_cases
 
     table = reader.known(given.get("cases", {}), _CASES, "cases")
@@ -362,7 +271,7 @@ def _cases(reader: _Reader, given: Mapping[str, Any]) -> list[SuiteCase]:
     return [found[name] for name in sorted(found)]
 
 
-def _orbit_files(reader: _Reader, pattern: str) -> list[Path]:
+def _orbit_files(reader: SuiteReader, pattern: str) -> list[Path]:
     try:
         files = sorted(reader.path.absolute().parent.glob(pattern))
     except (RuntimeError, ValueError):
@@ -372,7 +281,7 @@ def _orbit_files(reader: _Reader, pattern: str) -> list[Path]:
     return files
 
 
-def _of_file(reader: _Reader, budgets: Mapping[str, Any], path: Path) -> SuiteCase:
+def _of_file(reader: SuiteReader, budgets: Mapping[str, Any], path: Path) -> SuiteCase:
     from truefall.validate.orbit_file import read_orbit_file
 
     try:
@@ -388,7 +297,7 @@ def _of_file(reader: _Reader, budgets: Mapping[str, Any], path: Path) -> SuiteCa
 
 
 def _case(
-    reader: _Reader, budgets: Mapping[str, Any], name: str, file: Path | None, spec: OrbitSpec,
+    reader: SuiteReader, budgets: Mapping[str, Any], name: str, file: Path | None, spec: OrbitSpec,
     title: str, why: str,
 ) -> SuiteCase:  # fmt: skip
     """With the budget that applies: by name, by pattern, the default, the case's own."""
