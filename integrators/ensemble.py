@@ -97,11 +97,8 @@ def _run(request: Request, x: Floats, v: Floats, max_steps: int, workers: int) -
 
     found, parts, stamps = request.equations, request.parts, request.stamps
     many = len(x)
-    states, _, pars, _ = begin(found, x, v, request.light)
-    states = np.ascontiguousarray(states)
-    states[:, found.time_row] = stamps[0]
+    states, pars = np.empty((many, found.size)), np.empty((many, 3))
     rows = np.full((many, stamps.size, found.size), np.nan)
-    rows[:, 0] = states
     counts, status = first_numbers(many), np.zeros(many, dtype=np.int64)
     reals = np.tile(real_numbers(request), (many, 1))
     size = np.array([*parts.memory, max_steps], dtype=np.int64)
@@ -110,12 +107,16 @@ def _run(request: Request, x: Floats, v: Floats, max_steps: int, workers: int) -
 
     def work(first: int) -> None:
         end = min(first + chunk, many)
+        own = slice(first, end)
+        states[own], _, pars[own], _ = begin(found, x[own], v[own], request.light, first)
+        states[own, found.time_row] = stamps[0]
+        rows[own, 0] = states[own]
         run(numbers(request), pars, parts.code, parts.table, reals, states, size, stamps, rows,
             counts, status, first, end)  # fmt: skip
         finish_many(found, pars, rows, out, first, end)
 
     # Small chunks, so that a thread with long orbits does not keep the others waiting.
-    chunk = max(1, min(64, -(-many // (4 * workers))))
+    chunk = max(1, min(256, -(-many // (8 * workers))))
     firsts = range(0, many, chunk)
     if workers == 1 or len(firsts) == 1:
         for first in firsts:

@@ -109,6 +109,13 @@ def _sound(kind: int, static: int, y: Floats, change: Floats, moved: Floats) -> 
 
 
 @kernel
+def _at_edge(kind: int, static: int, y: Floats) -> bool:
+    """Whether a run that cannot go on stands at the horizon of a static chart, or at r = 0."""
+    radius = areal_radius(kind, y)
+    return radius < 2.001 if static == 1 else radius < 0.001
+
+
+@kernel
 def _reach(numbers: Integers, y: Floats, stamps: Floats, h: float) -> float:
     """The step, no further than the last time stamp where the step is chart time."""
     if numbers[1] == 1:
@@ -204,7 +211,7 @@ def _loop(
                 memory[:, :] = before
             count[1] += 1
             if not _smaller(real, error, taken, sound):
-                return 3
+                return 4 if _at_edge(kind, numbers[4], y) else 3
             continue
         last, ends = taken, y[at] + (change[at] + carry[at])
         if events > 0:
@@ -237,7 +244,7 @@ def _many(
 ) -> None:  # fmt: skip
     """Run the orbits from ``first`` to ``end - 1`` of an ensemble, each as if alone."""
     none, nothing = np.zeros((0, 3), np.int64), np.zeros((0, 2))
-    no_hits, no_states = np.zeros((0, 2), np.int64), np.zeros((0, starts.shape[1] + 1))
+    no_hits, no_states = np.zeros((0, 3), np.int64), np.zeros((0, starts.shape[1] + 1))
     memory, before = np.zeros((size[0], size[1])), np.zeros((size[0], size[1]))
     scratch, places = np.zeros((size[0], size[1])), np.zeros((4, 3))
     carry = np.zeros(starts.shape[1])

@@ -4,15 +4,11 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
 
 import numpy as np
 import numpy.typing as npt
 
 from truefall.integrators.request import Event, Request, check_events, check_request, three
-
-if TYPE_CHECKING:
-    from truefall.integrators.index import Equations
 
 __all__ = ["STATUS", "Event", "EventHit", "Run", "propagate"]
 
@@ -188,9 +184,9 @@ def _run(
     work = [np.zeros(parts.memory) for _ in range(3)]
     count = first_numbers(1)[0]
     real, places = real_numbers(request), first_places(x[0], v[0])
-    hits = np.zeros((_HITS + 2 * len(codes), 2), dtype=np.int64)
+    hits = np.zeros((_HITS + 2 * len(codes), 3), dtype=np.int64)
     hit_states = np.zeros((hits.shape[0], found.size + 1))
-    seen: list[tuple[int, float, Floats]] = []
+    seen: list[tuple[int, bool, Floats]] = []
     status, carry = 0, np.zeros_like(y)
     arguments = (numbers(request), par, parts.code, parts.table, real, y, carry, *work, stamps,
                  rows, places, codes, values, hits, hit_states, count)  # fmt: skip
@@ -203,10 +199,9 @@ def _run(
         if progress is not None and status == 0:
             progress(int(count[0]), float(y[found.time_row]))
     word = STATUS[0 if status == 6 else int(status)]
-    kept = seen if status != 2 else until_stop(seen, found, codes, request.direction)
     return assemble(request, finish(found, par, rows), count, word, [
-        hit(found, finish(found, par, state[None]), float(state[found.time_row]), names[e])
-        for e, _, state in kept
+        hit(finish(found, par, state[None]), float(state[found.time_row]), names[e])
+        for e, _, state in until_stop(seen)
     ])  # fmt: skip
 
 
@@ -245,29 +240,22 @@ def first_places(x: Floats, v: Floats) -> Floats:
 
 def sorted_hits(
     hits: npt.NDArray[np.int64], states: Floats, count: npt.NDArray[np.int64], ahead: float
-) -> list[tuple[int, float, Floats]]:
-    """Hits of a stretch in order: event, point of the step, state; the store is emptied."""
+) -> list[tuple[int, bool, Floats]]:
+    """Hits of a stretch in order: event, whether it ends the run, state; the store is emptied."""
     n = int(count[4])
     order = sorted(range(n), key=lambda i: (hits[i, 1], ahead * states[i, 0]))
     count[4] = 0
-    return [(int(hits[i, 0]), float(states[i, 0]), states[i, 1:].copy()) for i in order]
+    return [(int(hits[i, 0]), bool(hits[i, 2]), states[i, 1:].copy()) for i in order]
 
 
-def until_stop(
-    seen: list[tuple[int, float, Floats]],
-    found: Equations,
-    codes: npt.NDArray[np.int64],
-    ahead: float,
-) -> list[tuple[int, float, Floats]]:
+def until_stop(seen: list[tuple[int, bool, Floats]]) -> list[tuple[int, bool, Floats]]:
     """The hits up to the first that ended the run."""
-    at = found.time_row
-    ends = min(ahead * s[at] for e, _, s in seen[-len(codes) * 2 :] if codes[e, 2] == 0 and e >= 0)
-    return [h for h in seen if ahead * h[2][at] <= ends]
+    ends = [row for row, (_, stops, _) in enumerate(seen) if stops]
+    return seen[: ends[0] + 1] if ends else seen
 
 
-def hit(found: Equations, row: Floats, time: float, name: str) -> EventHit:
+def hit(row: Floats, time: float, name: str) -> EventHit:
     """An event's state for people."""
-    del found
     return EventHit(name, time, float(row[0, 6]), row[0, :3].copy(), row[0, 3:6].copy())
 
 

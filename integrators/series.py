@@ -38,10 +38,13 @@ Integers = npt.NDArray[np.int64]
 
 
 @kernel
-def run_tape(lines: Integers, literals: Floats, par: Floats, s: Floats, k: int) -> None:
+def run_tape(
+    lines: Integers, literals: Floats, par: Floats, s: Floats, k: int, unit: float
+) -> None:  # fmt: skip
     """Set coefficient ``k`` of every row of a tape; operations as numbered in tape.py.
 
-    The sums stand here in full: a call for each would cost more than the sum.
+    Powers are of (sigma/unit), so that coefficients neither overflow nor vanish.  The sums stand
+    here in full: a call for each would cost more than the sum.
     """
     for line in range(lines.shape[0]):
         op, out, i, j, at = (
@@ -88,7 +91,7 @@ def run_tape(lines: Integers, literals: Floats, par: Floats, s: Floats, k: int) 
         elif op == 8:
             s[out, k] = atan2(s[i, k], s[j, k])
         elif op == 9:
-            s[out, k + 1] = s[i, k] / (k + 1)
+            s[out, k + 1] = s[i, k] * (unit / (k + 1))
         elif k == 0:
             s[out, 0] = cos(s[i, 0])
             s[out + 1, 0] = sin(s[i, 0])
@@ -102,10 +105,12 @@ def run_tape(lines: Integers, literals: Floats, par: Floats, s: Floats, k: int) 
 
 
 @kernel
-def taylor(lines: Integers, literals: Floats, par: Floats, s: Floats, order: int) -> None:
+def taylor(
+    lines: Integers, literals: Floats, par: Floats, s: Floats, order: int, unit: float
+) -> None:  # fmt: skip
     """Coefficients 1 to ``order`` of the state's rows from coefficient 0."""
     for k in range(order):
-        run_tape(lines, literals, par, s, k)
+        run_tape(lines, literals, par, s, k, unit)
 
 
 @kernel
@@ -117,7 +122,7 @@ def evaluate(
     for row in range(given.shape[0]):
         for i in range(given.shape[1]):
             s[i, 0] = given[row, i]
-        run_tape(lines, literals, par, s, 0)
+        run_tape(lines, literals, par, s, 0, 1.0)
         for i in range(results.size):
             out[row, i] = s[results[i], 0]
 
@@ -189,9 +194,16 @@ def _linear_in_two_words(
 
 @kernel
 def run_tape_in_two_words(
-    lines: Integers, literals: Floats, par: Floats, par_low: Floats, s: Floats, t: Floats, k: int
+    lines: Integers,
+    literals: Floats,
+    par: Floats,
+    par_low: Floats,
+    s: Floats,
+    t: Floats,
+    k: int,
+    unit: float,
 ) -> None:
-    """As :func:`run_tape`; ``t`` holds the second words."""
+    """As :func:`run_tape`; ``t`` holds the second words; ``unit`` is a power of two."""
     for line in range(lines.shape[0]):
         op, out, i, j, at = (
             lines[line, 0], lines[line, 1], lines[line, 2], lines[line, 3], lines[line, 4],
@@ -220,7 +232,7 @@ def run_tape_in_two_words(
         elif op == 8:
             value, low = angle(s[i, k], t[i, k], s[j, k], t[j, k])
         if op == 9:
-            s[out, k + 1], t[out, k + 1] = divide(s[i, k], t[i, k], float(k + 1), 0.0)
+            s[out, k + 1], t[out, k + 1] = divide(s[i, k] * unit, t[i, k] * unit, k + 1.0, 0.0)
         elif op == 7:
             _circle_in_two_words(s, t, out, i, k)
         else:
@@ -236,10 +248,11 @@ def taylor_in_two_words(
     s: Floats,
     t: Floats,
     order: int,
+    unit: float,
 ) -> None:
     """As :func:`taylor`; ``t`` holds the second words."""
     for k in range(order):
-        run_tape_in_two_words(lines, literals, par, par_low, s, t, k)
+        run_tape_in_two_words(lines, literals, par, par_low, s, t, k, unit)
 
 
 @kernel
@@ -260,6 +273,6 @@ def evaluate_in_two_words(
     for row in range(given.shape[0]):
         for i in range(given.shape[1]):
             s[i, 0], t[i, 0] = given[row, i], given_low[row, i]
-        run_tape_in_two_words(lines, literals, par, par_low, s, t, 0)
+        run_tape_in_two_words(lines, literals, par, par_low, s, t, 0, 1.0)
         for i in range(results.size):
             out[row, i], out_low[row, i] = s[results[i], 0], t[results[i], 0]

@@ -17,7 +17,7 @@ Floats = npt.NDArray[np.float64]
 
 
 def begin(
-    equations: Equations, positions: Floats, velocities: Floats, light: bool
+    equations: Equations, positions: Floats, velocities: Floats, light: bool, first: int = 0
 ) -> tuple[Floats, Floats, Floats, Floats]:
     """States of many starts in two words, rounded once.
 
@@ -27,6 +27,8 @@ def begin(
     positions, velocities : (m, 3)
         Cartesian in the chart, float64 numbers taken as exact; for light the direction counts.
     light : bool
+    first : int
+        Number of the first start, for messages.
 
     Returns
     -------
@@ -57,12 +59,12 @@ def begin(
                 np.zeros_like(given[rows]), part, part_low,
             )  # fmt: skip
             out[rows], low[rows] = part, part_low
-    _refuse(equations, positions, out)
+    _refuse(equations, positions, out, first)
     n = equations.size
     return out[:, :n], low[:, :n], out[:, n:].copy(), low[:, n:].copy()
 
 
-def _refuse(equations: Equations, positions: Floats, out: Floats) -> None:
+def _refuse(equations: Equations, positions: Floats, out: Floats, first: int) -> None:
     """ValueError for the first start that is none."""
     if equations.kind <= 1:
         return
@@ -70,7 +72,7 @@ def _refuse(equations: Equations, positions: Floats, out: Floats) -> None:
     size = np.sqrt((positions * positions).sum(axis=1))
     for row in np.flatnonzero(~(size > rest))[:1]:
         raise ValueError(
-            f"start {row}: the {equations.chart} chart holds radii above {rest:g}, and the "
+            f"start {first + row}: the {equations.chart} chart holds radii above {rest:g}, and the "
             f"position has {size[row]:g}"
         )
     energy = out[:, equations.size]
@@ -82,7 +84,7 @@ def _refuse(equations: Equations, positions: Floats, out: Floats) -> None:
             else "has a velocity that nothing can have there (at or above the speed of light, or "
             "no direction)"
         )
-        raise ValueError(f"start {row} {words}")
+        raise ValueError(f"start {first + row} {words}")
 
 
 def _results(equations: Equations) -> Any:

@@ -34,7 +34,7 @@ def _rate(
     lines: Integers, literals: Floats, results: Integers, par: Floats, par_low: Floats,
     s: Floats, t: Floats, out: Floats, out_low: Floats,
 ) -> None:  # fmt: skip
-    run_tape_in_two_words(lines, literals, par, par_low, s, t, 0)
+    run_tape_in_two_words(lines, literals, par, par_low, s, t, 0, 1.0)
     for i in range(results.size):
         out[i], out_low[i] = s[results[i], 0], t[results[i], 0]
 

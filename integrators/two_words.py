@@ -14,7 +14,7 @@ from typing import Protocol
 import numpy as np
 import numpy.typing as npt
 
-from truefall.integrators.adaptive.taylor import decay
+from truefall.integrators.adaptive.taylor import decay, natural_unit, power_of_two
 from truefall.integrators.arithmetic import add
 from truefall.integrators.equations.rates import areal_radius, rate, scales
 from truefall.integrators.equations.tapes import rate_tape
@@ -56,26 +56,36 @@ class _Taylor:
         self._request, self._order = request, request.order
         self._s = np.zeros((self._tape.rows, self._order + 1))
         self._t = np.zeros_like(self._s)
-        self._size = np.zeros(found.size)
+        self._size, self._rates = np.zeros(found.size), np.zeros(found.size)
+        self._unit, self._next = 1.0, 0.0
         self.work = 0
 
     def choose(self, y: Floats, low: Floats, h: float) -> float:
         n = y.size
         self._s[:n, 0], self._t[:n, 0] = y, low
+        self._unit = self._next or power_of_two(
+            natural_unit(
+                self._request.equations.kind, self._request.variable, self._par, y, self._rates,
+                self._size,
+            )
+        )  # fmt: skip
         taylor_in_two_words(
             self._lines, self._tape.literals, self._par, self._par_low, self._s, self._t,
-            self._order,
+            self._order, self._unit,
         )  # fmt: skip
         self.work += 1
         if self._request.step is not None:
+            self._next = power_of_two(abs(h))
             return h
         scales(self._request.equations.kind, self._par, y, self._size)
         tolerance = max(self._request.tolerance, _FINEST)
-        own = decay(self._s, self._size, n, self._order, tolerance)
+        own = self._unit * decay(self._s, self._size, n, self._order, tolerance)
+        self._next = power_of_two(own)
         return float(np.copysign(min(own, abs(h)), h))
 
     def change(self, theta: Pair, out: Floats, out_low: Floats) -> bool:
-        horner_in_two_words(self._s, self._t, self._order, *theta, out, out_low)
+        part = theta[0] / self._unit, theta[1] / self._unit
+        horner_in_two_words(self._s, self._t, self._order, *part, out, out_low)
         return True
 
 

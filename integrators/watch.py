@@ -103,10 +103,11 @@ def _record(
     for i in range(y.size):
         states[row, 1 + i] = y[i] + (change[i] + carry[i])
     count[4] += 1
+    hits[row, 2] = 0
     if watched[e, 2] > 0:
         watched[e, 2] -= 1
-        return bool(watched[e, 2] == 0)
-    return False
+        hits[row, 2] = 1 if watched[e, 2] == 0 else 0
+    return bool(hits[row, 2] == 1)
 
 
 @kernel

@@ -20,6 +20,8 @@ from truefall.integrators.methods import Parts, Problem
 __all__ = ["parts"]
 
 Integers = npt.NDArray[np.int64]
+#: What rounding makes of a column, relative to the change; it does not count as error.
+ROUNDING = 1e-15
 
 
 @kernel
@@ -65,7 +67,8 @@ def extrapolation_step(
             for m in range(n):
                 d = (memory[j + 1, m] - memory[j, m]) * factor
                 if j == 0 and k == columns - 1:
-                    error = max(error, abs(d) / size[m])
+                    seen = max(0.0, abs(d) - ROUNDING * abs(memory[j + 1, m]))
+                    error = max(error, seen / size[m])
                 memory[j, m] = memory[j + 1, m] + d
     total = 0.0
     for m in range(n):

@@ -21,6 +21,8 @@ from truefall.integrators.methods import Parts, Problem
 __all__ = ["parts_of"]
 
 Integers = npt.NDArray[np.int64]
+#: Relative to the sum of the terms' sizes.
+ROUNDING = 5e-16
 
 
 @kernel
@@ -32,7 +34,8 @@ def runge_kutta_step(
 
     ``table``: rows of a, then b, then the weights of two error estimates.  ``code``: how many
     estimates, and the stage that is the first of the next step (-1 for none).  ``memory``: a
-    mark, the stages' rates, the first rate of this step, a row to work in.
+    mark, the stages' rates, the first rate of this step, rows to work in.  What rounding alone can
+    make of an estimate does not count as error.
     """
     s, n = table.shape[1], y.size
     place, size = memory[s + 2, :n], memory[s + 3, :n]
@@ -52,13 +55,15 @@ def runge_kutta_step(
     error, other = 0.0, 0.0
     scales(kind, par, y, size)
     for m in range(n):
-        total, first, second = 0.0, 0.0, 0.0
+        total, first, second, noise = 0.0, 0.0, 0.0, 0.0
         for j in range(s):
             total += table[s, j] * memory[1 + j, m]
             first += table[s + 1, j] * memory[1 + j, m]
             second += table[s + 2, j] * memory[1 + j, m]
+            noise += abs(table[s + 1, j] * memory[1 + j, m])
         change[m] = h * total
-        error = max(error, abs(h * first) / size[m])
+        seen = max(0.0, abs(first) - ROUNDING * noise)
+        error = max(error, abs(h) * seen / size[m])
         other = max(other, abs(h * second) / size[m])
         if not np.isfinite(total):
             error = np.inf

@@ -13,7 +13,7 @@ from __future__ import annotations
 import numpy as np
 import numpy.typing as npt
 
-from truefall.integrators.adaptive.taylor import decay
+from truefall.integrators.adaptive.taylor import decay, natural_unit, power_of_two
 from truefall.integrators.compiled import kernel
 from truefall.integrators.equations.rates import scales
 from truefall.integrators.equations.types import Floats
@@ -23,12 +23,12 @@ __all__ = ["parts", "taylor_mino_inside", "taylor_mino_step"]
 
 Integers = npt.NDArray[np.int64]
 
-# Rows of the memory: u, w, T, lambda, cosine and sine of the rotation, r, q.
-_ROWS = 8
+# Rows of the memory: u, w, T, lambda, cosine and sine of the rotation, r, q, units.
+_ROWS = 9
 
 
 @kernel
-def mino_orbit(par: Floats, s: Floats, order: int) -> None:
+def mino_orbit(par: Floats, s: Floats, order: int, unit: float) -> None:
     """Coefficients 1 to ``order`` of u, w, T, lambda from coefficient 0.
 
     Products by symmetry, pair by pair, all in one loop, in which a step spends its time.
@@ -58,7 +58,7 @@ def mino_orbit(par: Floats, s: Floats, order: int) -> None:
             uu += 2.0 * u[0] * u[k]
             rr += 2.0 * r[0] * r[k]
         force = square * (3.0 * uu - u[k])
-        step = 1.0 / (k + 1)
+        step = unit / (k + 1)
         w[k + 1] = (mu + force if k == 0 else force) * step
         u[k + 1] = w[k] * step
         clock[k + 1] = rr * step
@@ -66,11 +66,11 @@ def mino_orbit(par: Floats, s: Floats, order: int) -> None:
 
 
 @kernel
-def rotation(square: float, s: Floats, order: int) -> None:
+def rotation(square: float, s: Floats, order: int, unit: float) -> None:
     """Series of cos(L s) - 1 and sin(L s)/L in rows 4 and 5."""
     s[4, 0], s[5, 0] = 1.0, 0.0
     for k in range(order):
-        step = 1.0 / (k + 1)
+        step = unit / (k + 1)
         s[5, k + 1] = s[4, k] * step
         s[4, k + 1] = -square * s[5, k] * step
 
@@ -97,18 +97,27 @@ def taylor_mino_step(
     kind: int, variable: int, par: Floats, code: Integers, table: Floats, tolerance: float,
     y: Floats, h: float, memory: Floats, change: Floats,
 ) -> tuple[float, int, float]:  # fmt: skip
-    """One step; ``table[0, 0]`` 1 asks for a step chosen here."""
+    """One step; ``table[0, 0]`` 1 asks for a step chosen here.
+
+    The series are in powers of (s/unit); the last row of ``memory`` keeps this unit and the next.
+    """
     order = memory.shape[1] - 1
+    units = memory[-1]
+    if units[1] == 0.0:
+        units[1] = power_of_two(natural_unit(kind, variable, par, y, change, np.zeros(y.size)))
+    units[0] = units[1]
     memory[0, 0], memory[1, 0], memory[2, 0], memory[3, 0] = y[0], y[1], y[8], y[9]
-    mino_orbit(par, memory, order)
-    rotation(par[2], memory, order)
+    mino_orbit(par, memory, order, units[0])
+    rotation(par[2], memory, order, units[0])
     if table[0, 0] == 1.0:
         scales(kind, par, y, change)
         change[2], change[3], change[4], change[5] = change[8], change[9], 1.0, 1.0
-        own = decay(memory, change, 6, order, tolerance)
+        own = units[0] * decay(memory, change, 6, order, tolerance)
         if own < abs(h):
             h = own if h > 0.0 else -own
-    _change(memory, y, par[2], order, h, change)
+    if h != 0.0 and np.isfinite(h):
+        units[1] = power_of_two(abs(h))
+    _change(memory, y, par[2], order, h / units[0], change)
     return 0.0, 1, h
 
 
@@ -118,7 +127,7 @@ def taylor_mino_inside(
     y: Floats, theta: float, before: Floats, memory: Floats, scratch: Floats, change: Floats,
 ) -> int:  # fmt: skip
     """The change at a point of the step from the series just made."""
-    _change(memory, y, par[2], memory.shape[1] - 1, theta, change)
+    _change(memory, y, par[2], memory.shape[1] - 1, theta / memory[-1, 0], change)
     return 0
 
 
