@@ -1,12 +1,17 @@
-"""Parts of the command line: a group that knows near misses, numbers, versions."""
+"""Parts of the command line: a group that knows near misses, numbers, versions, causes."""
 
 from __future__ import annotations
 
+from typing import TYPE_CHECKING
+
 import click
 
-from truefall.validate.terminal import say
+from truefall.validate.terminal import say, working
 
-__all__ = ["Commands", "finite_number", "show_versions"]
+if TYPE_CHECKING:
+    from truefall.validate.check import CheckResult
+
+__all__ = ["Commands", "finite_number", "show_versions", "with_causes"]
 
 _LIBRARIES = (
     "numpy", "scipy", "numba", "h5py", "python-flint", "matplotlib", "click", "rich", "pyarrow",
@@ -80,3 +85,16 @@ def _bundled(name: str) -> str:
     except (ImportError, AttributeError):
         return "its library cannot be loaded"
     return ""
+
+
+def with_causes(result: CheckResult, *, always: bool) -> CheckResult:
+    """The result with the causes of its residual, unless it passes and nobody asked."""
+    if result.comparison is None or (result.verdict == "pass" and not always):
+        return result
+    from dataclasses import replace
+
+    from truefall.validate.causes import explain
+
+    with working(f"{result.name}: looking for causes") as tell:
+        found = explain(result, progress=lambda f: tell(f"{result.name}: trying causes: {f}"))
+    return replace(result, explanation=found)

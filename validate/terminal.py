@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import os
 import sys
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from typing import TextIO
 
@@ -61,13 +61,16 @@ def silence(stream: TextIO) -> None:
 
 
 @contextmanager
-def working(text: str) -> Iterator[None]:
-    """A moving sign of life on stderr while something takes long; nothing without a terminal."""
+def working(text: str) -> Iterator[Callable[[str], None]]:
+    """A moving sign of life on stderr while something takes long; nothing without a terminal.
+
+    Yields a function that changes the text.
+    """
     if not sys.stderr.isatty() or os.environ.get("TERM") == "dumb":
-        yield
+        yield lambda _: None
         return
     from rich.console import Console
 
     console = Console(stderr=True, no_color=not wants_colour(sys.stderr), highlight=False)
-    with console.status(text, spinner="dots"):
-        yield
+    with console.status(text, spinner="dots") as status:
+        yield status.update

@@ -169,6 +169,7 @@ KEYS: dict[str, Any] = {
         "table_error_by_bound": float,
     },
     "growth": {"exponent": float, "kind": str},
+    "explanation": {"description": str, "ambiguous": list},
     "ends": {
         "before": {"time": float, "reason": str}, "after": {"time": float, "reason": str}
     },

@@ -31,6 +31,7 @@ def write_report(results: Sequence[CheckResult], directory: str | Path) -> list[
     from truefall.validate.errors import InputError
     from truefall.validate.report.document import document
     from truefall.validate.report.figures import write_figures
+    from truefall.validate.report.findings import write_findings_figures
     from truefall.validate.report.text import render
 
     folder = Path(directory)
@@ -46,6 +47,7 @@ def write_report(results: Sequence[CheckResult], directory: str | Path) -> list[
             stem = next(s for s in _numbered(base, len(results)) if s not in used)
             used.add(stem)
             written += write_figures(result, folder, stem)
+            written += write_findings_figures(result, folder, stem)
     except OSError as error:
         raise InputError(f"cannot be written ({error.strerror or error})", folder) from None
     return written

@@ -10,6 +10,7 @@ import numpy as np
 import numpy.typing as npt
 
 from truefall.validate.budget import RULE
+from truefall.validate.report.findings import findings_json
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -226,7 +227,8 @@ def file_object(result: CheckResult) -> dict[str, Any]:
             "kind": growth.kind if growth else "none",
         }
     found["invariants"] = _invariants(result)
-    found |= {"rule": RULE, "judged": _judged(result), "ends": _ends(result), "findings": []}
+    found |= {"rule": RULE, "judged": _judged(result), "ends": _ends(result)}
+    found |= findings_json(result)
     plain: dict[str, Any] = _plain(found)
     return plain
 

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 from truefall.validate.budget import RULE
 from truefall.validate.report.document import summary_of
+from truefall.validate.report.findings import findings_lines
 
 if TYPE_CHECKING:
     from truefall.validate.check import CheckResult
@@ -219,6 +220,7 @@ def render(result: CheckResult) -> str:
         growth = _growth_line(result)
         lines += [growth] if growth else []
         lines += _floor_line(result, units)
+        lines += findings_lines(result)
         lines += _rule_lines(result)
     return "\n".join(lines)
 
