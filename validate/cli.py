@@ -11,8 +11,10 @@ from typing import TYPE_CHECKING, Any, NoReturn
 
 import click
 
+from truefall.validate.bench.command import bench
 from truefall.validate.cli_parts import Commands, finite_number, show_versions, with_causes
 from truefall.validate.errors import InputError, UsageError
+from truefall.validate.nightly.command import nightly
 from truefall.validate.terminal import prepare_streams, say, silence, working
 
 if TYPE_CHECKING:
@@ -338,30 +340,8 @@ def inspect(path: str, verify: int, as_json: bool) -> int:
     return 0 if found.conforms else 1
 
 
-@cli.command()
-@click.argument("suite", required=False, metavar="SUITE.toml")
-@click.option("--json", "as_json", is_flag=True, help="One JSON document on stdout.")
-@click.option("--out", metavar="DIR", help="Where the nights are kept (SUITE-nights beside it).")
-@click.option("--cluster", metavar="ADDRESS", help="Run the cases on a Dask cluster.")
-@click.option("--jobs", type=click.IntRange(min=1), metavar="N", help="Cases at a time.")
-@click.option("--rebuild", is_flag=True, help="Make figures and pages again from the nights.")
-@click.option("--accept", multiple=True, metavar="CASE", help="Last night's figures are right.")
-@click.option(
-    "--init",
-    is_flag=False,
-    flag_value=".",
-    metavar="[DIR]",
-    help="Write a commented suite and adaptors in Python, C and Fortran.",
-)
-@click.option(
-    "--undecided", type=click.Choice(("error", "skip", "pass")), default="error",
-    help="What a case counts as that cannot be settled.",
-)  # fmt: skip
-def nightly(suite: str | None, **options: Any) -> int:
-    """Run propagators over cases, record, judge, compare with the past, report."""
-    from truefall.validate.nightly.command import nightly_command
-
-    return nightly_command(suite, **options)
+cli.add_command(nightly)
+cli.add_command(bench)
 
 
 def _fault(error: BaseException) -> str:

@@ -1,4 +1,4 @@
-"""What ``truefall nightly`` does with its options; the command itself is in :mod:`..cli`."""
+"""The command ``truefall nightly``.  Heavy modules are imported where they are needed."""
 
 from __future__ import annotations
 
@@ -9,16 +9,37 @@ from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+import click
+
 from truefall.validate.errors import UsageError
 from truefall.validate.terminal import say, wants_colour
 
 if TYPE_CHECKING:
     from truefall.validate.nightly.record import Night
 
-__all__ = ["nightly_command"]
+__all__ = ["nightly"]
 
 
-def nightly_command(
+@click.command()
+@click.argument("suite", required=False, metavar="SUITE.toml")
+@click.option("--json", "as_json", is_flag=True, help="One JSON document on stdout.")
+@click.option("--out", metavar="DIR", help="Where the nights are kept (SUITE-nights beside it).")
+@click.option("--cluster", metavar="ADDRESS", help="Run the cases on a Dask cluster.")
+@click.option("--jobs", type=click.IntRange(min=1), metavar="N", help="Cases at a time.")
+@click.option("--rebuild", is_flag=True, help="Make figures and pages again from the nights.")
+@click.option("--accept", multiple=True, metavar="CASE", help="Last night's figures are right.")
+@click.option(
+    "--init",
+    is_flag=False,
+    flag_value=".",
+    metavar="[DIR]",
+    help="Write a commented suite and adaptors in Python, C and Fortran.",
+)
+@click.option(
+    "--undecided", type=click.Choice(("error", "skip", "pass")), default="error",
+    help="What a case counts as that cannot be settled.",
+)  # fmt: skip
+def nightly(
     suite: str | None,
     *,
     as_json: bool,
@@ -30,13 +51,7 @@ def nightly_command(
     init: str | None,
     undecided: str,
 ) -> int:
-    """Run the command; returns the exit status.
-
-    Raises
-    ------
-    UsageError, InputError
-        One sentence each.
-    """
+    """Run propagators over cases, record, judge, compare with the past, report."""
     if sys.platform == "win32":
         raise UsageError("nightly needs a POSIX system: it forks, kills and limits programs")
     if init is not None:
@@ -79,17 +94,22 @@ def nightly_command(
 
 def _tell(night: Night, folder: Path, as_json: bool) -> None:
     """One line on stdout, what was noticed and where things are on stderr."""
-    from truefall.validate.nightly.pages import summary_line
-    from truefall.validate.nightly.run import report_folder
+    from truefall.validate.nightly.night_file import night_as_json
+    from truefall.validate.nightly.run import pages_module, report_folder
 
-    say(summary_line(night), err=as_json)
+    pages, report = pages_module(), report_folder(folder, night.number)
+    line = pages.summary_line(night) if pages else f"{night.suite}: {night.verdict}"
+    say(line, err=as_json)
     for alarm in night.alarms:
         if alarm.level != "note":
             say(f"{alarm.name}: {alarm.text}", err=True)
-    pages = report_folder(folder, night.number)
-    say(f"wrote {pages / 'index.html'} and {folder / night.result_set}", err=True)
+    if pages:
+        say(f"wrote {report / 'index.html'}", err=True)
+    say(f"wrote {folder / night.result_set}", err=True)
     if as_json:
-        document = json.loads((pages / "report.json").read_text("utf-8"))
+        document = night_as_json(night)
+        if pages:
+            document = json.loads((report / "report.json").read_text("utf-8"))
         say(json.dumps(document, indent=1, allow_nan=False))
 
 

@@ -123,7 +123,7 @@ class KeptOrbit:
 
     def _other(self, stamps: Floats) -> KeptOrbit | None:
         """The same orbit at other times, such as stamps moved by half a unit of their digits."""
-        if self._folder is None or not 1 < stamps.size or not np.isfinite(stamps).all():
+        if self._folder is None or not stamps.size > 1 or not np.isfinite(stamps).all():
             return None
         return _found_or_made(replace(self._spec, times=tuple(stamps.tolist())), self._folder, self)
 

@@ -16,6 +16,7 @@ import time
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import replace
 from pathlib import Path
+from typing import Any
 
 from truefall.validate.errors import InputError
 from truefall.validate.nightly.accepting import accept, read_accepted
@@ -234,19 +235,26 @@ def report_folder(out: Path, number: int) -> Path:
     return out / f"report-{number:05d}"
 
 
+def pages_module() -> Any:
+    """What writes the pages; None where it is not there."""
+    import importlib
+
+    try:
+        return importlib.import_module("truefall.validate.nightly.pages")
+    except ModuleNotFoundError:
+        return None
+
+
 def _pages(night: Night, trends: Trends, out: Path) -> None:
     """Write the pages of a night whole, and a copy under a name that does not change."""
-    import importlib.util
-
-    if importlib.util.find_spec("truefall.validate.nightly.pages") is None:
+    pages = pages_module()
+    if pages is None:
         return
-    from truefall.validate.nightly.pages import write_pages
-
     final, latest = report_folder(out, night.number), out / "latest"
     unfinished = out / f".report-{night.number:05d}.unfinished"
     shutil.rmtree(unfinished, ignore_errors=True)
     unfinished.mkdir()
-    write_pages(night, trends.trends([c.key for c in night.cases]), unfinished)
+    pages.write_pages(night, trends.trends([c.key for c in night.cases]), unfinished)
     shutil.rmtree(final, ignore_errors=True)
     unfinished.rename(final)
     copy = out / ".latest.unfinished"
