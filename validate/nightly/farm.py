@@ -91,13 +91,14 @@ class ClusterWorkers:
 
     def __init__(self, address: str) -> None:
         try:
-            from distributed import Client
+            import distributed
         except ImportError:
             raise UsageError(
                 "--cluster needs dask.distributed: pip install 'truefall[cluster]'"
             ) from None
         try:
-            self._client: Any = Client(address, timeout=20, set_as_default=False)
+            client: Any = distributed.Client
+            self._client = client(address, timeout=20, set_as_default=False)
             threads = sum(self._client.nthreads().values())
         except (OSError, ValueError, TimeoutError) as error:
             raise InputError(

@@ -126,6 +126,7 @@ def run_night(
     jobs: int = 1,
     cluster: str | None = None,
     undecided: str = "error",
+    workers: Workers | None = None,
     progress: Callable[[int, int], None] | None = None,
 ) -> Night:
     """Run, judge, record, compare with the past, write the pages.
@@ -138,6 +139,8 @@ def run_night(
         Cases at a time, on this machine.
     cluster : str, optional
         Address of a Dask scheduler instead.
+    workers : Workers, optional
+        Instead of either.
     progress : callable, optional
         Told how many cases of how many are done.
 
@@ -157,7 +160,8 @@ def run_night(
                 out,
             )
         number = max([0, *nights_in(out / "nights")]) + 1
-        workers: Workers = ClusterWorkers(cluster) if cluster else LocalWorkers(jobs)
+        if workers is None:
+            workers = ClusterWorkers(cluster) if cluster else LocalWorkers(jobs)
         gathered = _Gathered(len(suite.keys()) > _MANY_CASES)
         name = night_path(Path("nights"), number).as_posix()
         with NightWriter(out / "nights", number) as writer:
