@@ -91,7 +91,7 @@ def run_tape(
         elif op == 8:
             s[out, k] = atan2(s[i, k], s[j, k])
         elif op == 9:
-            s[out, k + 1] = s[i, k] * (unit / (k + 1))
+            s[out, k + 1] = unit * s[i, k] / (k + 1.0)
         elif k == 0:
             s[out, 0] = cos(s[i, 0])
             s[out + 1, 0] = sin(s[i, 0])

@@ -14,6 +14,7 @@ import numpy as np
 import numpy.typing as npt
 
 from truefall.integrators.adaptive.taylor import decay, natural_unit, power_of_two
+from truefall.integrators.arithmetic import two_product, two_sum
 from truefall.integrators.compiled import kernel
 from truefall.integrators.equations.rates import scales
 from truefall.integrators.equations.types import Floats
@@ -58,11 +59,13 @@ def mino_orbit(par: Floats, s: Floats, order: int, unit: float) -> None:
             uu += 2.0 * u[0] * u[k]
             rr += 2.0 * r[0] * r[k]
         force = square * (3.0 * uu - u[k])
-        step = unit / (k + 1)
-        w[k + 1] = (mu + force if k == 0 else force) * step
-        u[k + 1] = w[k] * step
-        clock[k + 1] = rr * step
-        time[k + 1] = energy * (rr + 2.0 * r[k] + 4.0 * q[k]) * step
+        # Divided, not multiplied by 1/(k + 1): that number's rounding would be the same in every
+        # step, and the energy would drift.
+        n = k + 1.0
+        w[k + 1] = unit * (mu + force if k == 0 else force) / n
+        u[k + 1] = unit * w[k] / n
+        clock[k + 1] = unit * rr / n
+        time[k + 1] = unit * energy * (rr + 2.0 * r[k] + 4.0 * q[k]) / n
 
 
 @kernel
@@ -70,9 +73,24 @@ def rotation(square: float, s: Floats, order: int, unit: float) -> None:
     """Series of cos(L s) - 1 and sin(L s)/L in rows 4 and 5."""
     s[4, 0], s[5, 0] = 1.0, 0.0
     for k in range(order):
-        step = unit / (k + 1)
-        s[5, k + 1] = s[4, k] * step
-        s[4, k + 1] = -square * s[5, k] * step
+        s[5, k + 1] = unit * s[4, k] / (k + 1.0)
+        s[4, k + 1] = -unit * square * s[5, k] / (k + 1.0)
+
+
+@kernel
+def _unrolled(square: float, e: float, f: float) -> float:
+    """What (1 + e)^2 + L^2 f^2 = 1 asks to be added to e, the cosine less one, as a second word.
+
+    Steps of the same length recur; the same rounding of e in each would stretch or shrink the
+    directions steadily.
+    """
+    p, p_low = two_product(e, e)
+    q, q_low = two_product(f, f)
+    s, s_low = two_product(square, q)
+    total, rest = two_sum(s, p)
+    total, other = two_sum(total, 2.0 * e)
+    over = total + (rest + other + s_low + p_low + square * q_low)
+    return -0.5 * over / (1.0 + e)
 
 
 @kernel
@@ -87,9 +105,10 @@ def _change(s: Floats, y: Floats, square: float, order: int, theta: float, out: 
         e = (e + s[4, k]) * theta
         f = (f + s[5, k]) * theta
     out[0], out[1], out[8], out[9] = a, b, c, d
+    low = _unrolled(square, e, f)
     for i in range(3):
-        out[2 + i] = e * y[2 + i] + f * y[5 + i]
-        out[5 + i] = e * y[5 + i] - square * (f * y[2 + i])
+        out[2 + i] = e * y[2 + i] + f * y[5 + i] + low * y[2 + i]
+        out[5 + i] = e * y[5 + i] - square * (f * y[2 + i]) + low * y[5 + i]
 
 
 @kernel

@@ -146,9 +146,10 @@ def result_tape(kind: int, size: int) -> Tape:
     if kind <= 1:
         return record.finish([y[0], y[1], 0.0, y[2], y[3], 0.0, y[4]])
     if kind >= 9:
-        r = 1.0 / y[0]
-        x = [r * y[2 + i] for i in range(3)]
-        moved = [r * (y[5 + i] - y[1] * x[i]) / out[8] for i in range(3)]
+        # Rounding stretches n and m alike, steadily; only their direction is used.
+        scale = 1.0 / (y[0] * root(_dot(y[2:5], y[2:5])))
+        x = [scale * y[2 + i] for i in range(3)]
+        moved = [(scale * y[5 + i] - (y[1] / y[0]) * x[i]) / out[8] for i in range(3)]
         return record.finish([*x, *moved, y[9]])
     pace = out[6]
     if kind != 8:
