@@ -152,15 +152,17 @@ def run_all(
             try:
                 if suspects:
                     if not under_way:
-                        under_way[executor.submit(work, suspects[0])] = suspects.popleft()
+                        future = executor.submit(work, suspects[0])
+                        under_way[future] = suspects.popleft()  # not before it was handed over
                 else:
                     while more and len(under_way) < workers.window:
                         job = next(source, None)
                         if job is None:
                             more = False
                             continue
-                        suspects.append(job)  # until it is handed over
-                        under_way[executor.submit(work, job)] = suspects.pop()
+                        suspects.append(job)
+                        future = executor.submit(work, job)
+                        under_way[future] = suspects.pop()
             except BrokenExecutor:
                 broken = True
             alone = len(under_way) == 1 and not broken
