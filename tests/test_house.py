@@ -259,7 +259,7 @@ def test_readme_names_every_exit_status_and_only_commands_that_exist() -> None:
     listed = {int(n) for n in re.findall(r"^\| (\d+) \|", readme(), re.MULTILINE)}
     assert listed == {0, 1, 2, 3, 4, 5, 70, 130}
     used = set(re.findall(r"truefall (check|make|convert|cases|demo|[a-z]+) ", readme()))
-    named = used & {"bench", "selftest"}
+    named = used & {"selftest"}
     assert not named
     assert set(cli.commands) <= {n for n in cli.commands if f"truefall {n}" in readme()}
 

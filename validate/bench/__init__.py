@@ -1,0 +1,1 @@
+"""The integrators held to the truth: accuracy and cost of methods, equations and cases."""
