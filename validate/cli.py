@@ -12,23 +12,23 @@ from typing import TYPE_CHECKING, Any, NoReturn
 import click
 
 from truefall.validate.bench.command import bench
-from truefall.validate.cli_parts import Commands, finite_number, show_versions, with_causes
+from truefall.validate.cli_files import convert, make
+from truefall.validate.cli_parts import (
+    Commands,
+    declarations,
+    overrides_of,
+    show_versions,
+    with_causes,
+)
 from truefall.validate.errors import InputError, UsageError
 from truefall.validate.nightly.command import nightly
 from truefall.validate.terminal import prepare_streams, say, silence, working
 
 if TYPE_CHECKING:
-    from collections.abc import Callable
-
     from truefall.validate.check import CheckResult
 
 __all__ = ["cli", "main"]
 
-_SYSTEMS = ("geometric", "SI", "astronomical")
-_CHARTS = (
-    "areal", "isotropic", "harmonic", "kerr-schild", "painleve-gullstrand",
-    "eddington-finkelstein",
-)  # fmt: skip
 FAULT, INTERRUPTED = 70, 130
 
 
@@ -46,40 +46,6 @@ def cli() -> None:
     """
 
 
-def _overrides(options: dict[str, Any]) -> dict[str, Any]:
-    found: dict[str, Any] = {
-        k: options[k]
-        for k in ("system", "gm", "particle", "chart", "clock")
-        if options[k] is not None
-    }
-    if options.get("start_time") is not None:
-        found["start"] = {"time": options["start_time"]}
-    return found
-
-
-def _declarations(command: Callable[..., int]) -> Callable[..., int]:
-    """Options that say what a file does not say about itself."""
-    for option in (
-        click.option(
-            "--start-time",
-            metavar="NUMBER",
-            callback=finite_number,
-            help="Reading of the clock at the start.",
-        ),
-        click.option(
-            "--clock", type=click.Choice(("coordinate", "proper")), help="What time means."
-        ),
-        click.option("--chart", type=click.Choice(_CHARTS), help="Coordinates of the file."),
-        click.option("--particle", type=click.Choice(("massive", "light")), help="What moves."),
-        click.option(
-            "--gm", metavar="NUMBER", callback=finite_number, help="GM in the system's units."
-        ),
-        click.option("--system", type=click.Choice(_SYSTEMS), help="Unit system of the file."),
-    ):
-        command = option(command)
-    return command
-
-
 @cli.command()
 @click.argument("files", nargs=-1, required=True, metavar="FILE...")
 @click.option("--orbit", "orbit_file", metavar="F.toml", help="Orbit file: start and metadata.")
@@ -89,7 +55,7 @@ def _declarations(command: Callable[..., int]) -> Callable[..., int]:
 @click.option("--json", "as_json", is_flag=True, help="One JSON document on stdout.")
 @click.option("--fit", is_flag=True, help="Find the start that fits the file best.")
 @click.option("--explain", is_flag=True, help="Look for causes of a residual within budget too.")
-@_declarations
+@declarations
 def check(
     files: tuple[str, ...],
     orbit_file: str | None,
@@ -113,11 +79,11 @@ def check(
         from truefall.validate.orbit_file import parse_orbit, read_mapping
 
         parse_orbit(
-            {**read_mapping(orbit_file), **_overrides(options)}, orbit_file, need_start=False
+            {**read_mapping(orbit_file), **overrides_of(options)}, orbit_file, need_start=False
         )
     from truefall.validate.check import exit_status
 
-    given = {"orbit_file": orbit_file, "overrides": _overrides(options), "budget": table,
+    given = {"orbit_file": orbit_file, "overrides": overrides_of(options), "budget": table,
              "against": against, "fit": fit}  # fmt: skip
     results: list[CheckResult] = []
     faulty = False
@@ -171,115 +137,6 @@ def _show(result: CheckResult, *, explain: bool, err: bool) -> None:
         if said is not None and said.description and not said.unexplained:
             text += "\n" + f"  causes    {said.description}"
     say(text, err=err, colour=VERDICTS[result.verdict][1])
-
-
-def _writable(target: str) -> None:
-    """Refuse an output that cannot be, before anything is computed."""
-    from pathlib import Path
-
-    from truefall.validate.formats import suffix_of
-
-    try:
-        if not target:
-            raise UsageError("an empty name for the output; is a variable of the shell unset?")
-        suffix_of(target)
-    except InputError as error:
-        raise UsageError(f"the output {error}") from None
-    if Path(target).is_dir():
-        raise InputError("is a folder; name a file to write", target)
-    if not Path(target).absolute().parent.is_dir():
-        raise InputError("cannot be written: there is no such folder; make it first", target)
-
-
-@cli.command()
-@click.argument("orbit_file", required=False, metavar="ORBIT.toml")
-@click.option("--case", "case_name", metavar="NAME", help="A case of the catalogue instead.")
-@click.option("--all-cases", is_flag=True, help="Every case, NAME.h5 each, into the folder F.")
-@click.option("--out", required=True, metavar="F", help="Where to write; format by suffix.")
-@click.option("--truncate", is_flag=True, help="Stop at the orbit's end instead of refusing.")
-@click.option("--certified", is_flag=True, help="HDF5: second words beside the bounds.")
-@click.option("--reproducible", is_flag=True, help="HDF5: byte-identical when repeated.")
-def make(
-    orbit_file: str | None,
-    case_name: str | None,
-    all_cases: bool,
-    out: str,
-    **how: bool,
-) -> int:
-    """Write a reference trajectory at exactly the times of an orbit file."""
-    if [orbit_file is not None, case_name is not None, all_cases].count(True) != 1:
-        raise UsageError("make needs one of: an orbit file, --case NAME, --all-cases")
-    if all_cases:
-        return _make_all(out, how)
-    _writable(out)
-    if how["certified"] and not out.lower().endswith((".h5", ".hdf5")):
-        raise UsageError(f"--certified needs HDF5 (.h5), the only format with bounds, not {out}")
-    from truefall.validate.make import make as make_file
-    from truefall.validate.orbit_file import read_orbit_file
-
-    if case_name is not None:
-        from truefall.validate.cases import case
-
-        spec = case(case_name).spec
-    else:
-        spec = read_orbit_file(str(orbit_file), need_samples=True)
-    with working(f"making {out}"):
-        made = make_file(spec, out, **how)
-    note = f"; {made.end_note}" if made.end_note else ""
-    say(f"wrote {made.path}: {made.rows} rows, {made.orbit_class} orbit{note}", err=True)
-    return 0
-
-
-def _make_all(folder: str, how: dict[str, bool]) -> int:
-    """Every case of the catalogue, NAME.h5 each."""
-    from pathlib import Path
-
-    from truefall.validate.cases import load_cases
-    from truefall.validate.make import make as make_file
-
-    if not folder:
-        raise UsageError("an empty name for the output; is a variable of the shell unset?")
-    place = Path(folder)
-    if not place.absolute().parent.is_dir() or (place.exists() and not place.is_dir()):
-        raise InputError("cannot be made: with --all-cases name a folder", place)
-    place.mkdir(exist_ok=True)
-    rows = 0
-    cases = load_cases()
-    for case in cases:
-        with working(f"making {case.name}"):
-            rows += make_file(case.spec, place / f"{case.name}.h5", **how).rows
-    say(f"wrote {len(cases)} sets into {place}: {rows} rows", err=True)
-    return 0
-
-
-@cli.command()
-@click.argument("source", metavar="IN")
-@click.argument("target", metavar="OUT")
-@click.option("--orbit", "orbit_file", metavar="F.toml", help="Orbit file with the metadata.")
-@click.option("--trajectory", metavar="NAME", help="Which one, if IN holds several.")
-@click.option("--reproducible", is_flag=True, help="HDF5: byte-identical when repeated.")
-@_declarations
-def convert(
-    source: str,
-    target: str,
-    orbit_file: str | None,
-    trajectory: str | None,
-    reproducible: bool,
-    **options: Any,
-) -> int:
-    """Convert a trajectory between CSV, HDF5, NPZ, Parquet and OEM."""
-    _writable(target)
-    from truefall.validate.formats import losses, read_trajectory, write_trajectory
-
-    with working(f"converting {source}"):
-        found = read_trajectory(
-            source, trajectory=trajectory, overrides=_overrides(options), orbit_file=orbit_file
-        )
-        write_trajectory(target, found, reproducible=reproducible)
-    say(f"wrote {target}: {len(found)} rows", err=True)
-    for sentence in losses(target, found):
-        say(f"note: {sentence}", err=True)
-    return 0
 
 
 @cli.command()
@@ -341,6 +198,8 @@ def inspect(path: str, verify: int, as_json: bool) -> int:
 
 
 cli.add_command(nightly)
+cli.add_command(make)
+cli.add_command(convert)
 cli.add_command(bench)
 
 

@@ -2,16 +2,33 @@
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import click
 
 from truefall.validate.terminal import say, working
 
 if TYPE_CHECKING:
+    from collections.abc import Callable
+
     from truefall.validate.check import CheckResult
 
-__all__ = ["Commands", "finite_number", "show_versions", "with_causes"]
+__all__ = [
+    "CHARTS",
+    "SYSTEMS",
+    "Commands",
+    "declarations",
+    "finite_number",
+    "overrides_of",
+    "show_versions",
+    "with_causes",
+]
+
+SYSTEMS = ("geometric", "SI", "astronomical")
+CHARTS = (
+    "areal", "isotropic", "harmonic", "kerr-schild", "painleve-gullstrand",
+    "eddington-finkelstein",
+)  # fmt: skip
 
 _LIBRARIES = (
     "numpy", "scipy", "numba", "h5py", "python-flint", "matplotlib", "click", "rich", "pyarrow",
@@ -98,3 +115,38 @@ def with_causes(result: CheckResult, *, always: bool) -> CheckResult:
     with working(f"{result.name}: looking for causes") as tell:
         found = explain(result, progress=lambda f: tell(f"{result.name}: trying causes: {f}"))
     return replace(result, explanation=found)
+
+
+def overrides_of(options: dict[str, Any]) -> dict[str, Any]:
+    """Metadata that options give, as in an orbit file."""
+    found: dict[str, Any] = {
+        k: options[k]
+        for k in ("system", "gm", "particle", "chart", "clock")
+        if options[k] is not None
+    }
+    if options.get("start_time") is not None:
+        found["start"] = {"time": options["start_time"]}
+    return found
+
+
+def declarations(command: Callable[..., int]) -> Callable[..., int]:
+    """Options that say what a file does not say about itself."""
+    for option in (
+        click.option(
+            "--start-time",
+            metavar="NUMBER",
+            callback=finite_number,
+            help="Reading of the clock at the start.",
+        ),
+        click.option(
+            "--clock", type=click.Choice(("coordinate", "proper")), help="What time means."
+        ),
+        click.option("--chart", type=click.Choice(CHARTS), help="Coordinates of the file."),
+        click.option("--particle", type=click.Choice(("massive", "light")), help="What moves."),
+        click.option(
+            "--gm", metavar="NUMBER", callback=finite_number, help="GM in the system's units."
+        ),
+        click.option("--system", type=click.Choice(SYSTEMS), help="Unit system of the file."),
+    ):
+        command = option(command)
+    return command
