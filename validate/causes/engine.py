@@ -10,7 +10,7 @@ import numpy as np
 import numpy.typing as npt
 
 from truefall.validate.causes.fault import Fault, all_faults
-from truefall.validate.causes.fitting import Fit, Problem, fit, glance, numbers_of
+from truefall.validate.causes.fitting import Fit, Problem, columns_of, fit, glance, numbers_of
 from truefall.validate.causes.scene import Scene
 
 __all__ = ["MARGIN", "Candidate", "Search", "rows_of", "score"]
@@ -34,7 +34,7 @@ _OVERWHELMING = 0.9999
 #: A method's errors that leave so many times less than a mistake are believed in its place.
 _VETO = 20.0
 #: A mistake beside a method's errors must divide what these alone leave by this.
-_BESIDE = 30.0
+_BESIDE, _BESIDE_OF_MANY = 30.0, 1000.0
 #: A residual explained to this share by a method's errors is called that.
 _NUMERICAL = 0.5
 #: Misfits within this factor are alike.
@@ -106,13 +106,16 @@ class Search:
 
     def singles(self) -> list[Candidate]:
         """The most likely faults on their own, best first."""
-        return self._best(())
+        return self._best(None)
 
     def beside(self, first: Candidate) -> list[Candidate]:
         """The most likely faults beside known ones, all fitted together, best first."""
-        return self._best(first.fit.faults, first.fit.numbers)
+        return self._best(first.fit)
 
-    def _best(self, known: tuple[Fault, ...], numbers: Floats | None = None) -> list[Candidate]:
+    def _best(self, first: Fit | None) -> list[Candidate]:
+        known = () if first is None else first.faults
+        numbers = None if first is None else first.numbers
+        columns = None if first is None else columns_of(self.problem, first)
         rough: list[tuple[float, Fault]] = []
         family = ""
         taken = {f.cause for f in known}
@@ -122,7 +125,7 @@ class Search:
             if fault.family != family and self.progress is not None:
                 self.progress(fault.family + (" (second pass)" if known else ""))
             family = fault.family
-            rough.append((glance(self.problem, [*known, fault], numbers), fault))
+            rough.append((glance(self.problem, [*known, fault], numbers, columns), fault))
         rough.sort(key=lambda r: r[0] * 1.02 ** len(r[1].parameters))
         found = []
         for rank, (cost, fault) in enumerate(rough[: _LIKELY if not known else 5]):
@@ -161,6 +164,9 @@ def earned(candidate: Candidate, before: Candidate, method: Candidate | None) ->
     if not better(candidate, before):
         return False
     share = 1.0 - candidate.fit.cost / before.fit.cost
+    soft = method is not None and any(f.soft for f in candidate.fit.faults)
+    if soft and not (better(candidate, method) and share >= _OVERWHELMING):  # type: ignore[arg-type]
+        return False
     if candidate.misfit <= COMPATIBLE:
         return share >= _MOST
     if candidate.misfit <= _ROUNDED:
@@ -170,9 +176,18 @@ def earned(candidate: Candidate, before: Candidate, method: Candidate | None) ->
     return share >= _OVERWHELMING and not (vetoed and better(method, candidate))  # type: ignore[arg-type]
 
 
-def beats_method(pair: Candidate, method: Candidate) -> bool:
-    """Whether a mistake beside a method's errors has earned its place."""
-    return better(pair, method) and pair.fit.cost * _BESIDE < method.fit.cost
+def beats_method(pair: Candidate, first: Candidate, method: Candidate) -> bool:
+    """Whether a mistake beside a method's errors has earned its place.
+
+    It must be nearly all of the residual, and leave the method less to explain by a factor that
+    its own freedom does not account for.
+    """
+    factor = _BESIDE if first.fit.numbers.size <= 1 else _BESIDE_OF_MANY
+    return (
+        first.explains >= _NEARLY_ALL
+        and better(pair, method)
+        and pair.fit.cost * factor < method.fit.cost
+    )
 
 
 def distinct(candidates: Sequence[Candidate]) -> list[Candidate]:
@@ -204,7 +219,8 @@ def choose(search: Search) -> tuple[Candidate | None, list[Candidate]]:
     method = next((c for c in singles if c.numerical), None)
     good = simplest([c for c in mistakes if earned(c, nothing, method)])
     best = good[0] if good else None
-    if best is None or best.misfit > _ROUNDED:
+    rounding = nothing.misfit <= _ROUNDED  # two causes of what may be rounding are no finding
+    if (best is None and not rounding) or (best is not None and best.misfit > _ROUNDED):
         pair = _pair(search, [best] if best is not None else mistakes[:2], method)
         if pair is not None and (best is None or better(pair, best)):
             return pair, []
@@ -227,7 +243,9 @@ def simplest(candidates: list[Candidate]) -> list[Candidate]:
     def rank(c: Candidate) -> float:
         return _value(max(c.misfit, least), c)
 
-    return sorted(candidates, key=rank)
+    ranked = sorted(candidates, key=rank)
+    special = [c for c in ranked[1:] if general(ranked[0], c) and c.misfit <= least]
+    return sorted(ranked, key=lambda c: c is not special[0]) if special else ranked
 
 
 def alike(best: Candidate, other: Candidate) -> bool:
@@ -249,10 +267,12 @@ def _pair(search: Search, firsts: list[Candidate], method: Candidate | None) -> 
         pairs = search.beside(first)
         other = next((p for p in pairs if p.numerical), None)
         for pair in pairs:
+            visible = 1.0 - first.explains > _VISIBLE
             if pair.numerical:
-                share = 1.0 - first.explains if first.explains < 1.0 else 0.0
-                if share > _VISIBLE and method is not None and beats_method(pair, method):
+                if visible and method is not None and beats_method(pair, first, method):
                     found.append(pair)
+            elif pair.fit.faults[-1].soft and not visible:
+                continue
             elif earned(pair, first, other) and (
                 method is None or pair.explains >= _OVERWHELMING or better(pair, method)
             ):

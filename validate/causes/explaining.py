@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 import numpy.typing as npt
 
+from truefall.validate.causes.characters import character
 from truefall.validate.causes.describing import describe
 from truefall.validate.causes.engine import Candidate, Search, choose, shares, spread_of
 from truefall.validate.causes.fault import Fault, Fitted
@@ -49,8 +50,8 @@ def _explanation(result: CheckResult, progress: Callable[[str], None] | None) ->
     if search.nothing.misfit <= 1.0:
         return Explanation(description="the residual is within what digits and rounding leave open")
     chosen, alike = choose(search)
-    if chosen is None:
-        return Explanation(description=describe(scene), unexplained=True)
+    if chosen is None or (chosen.numerical and len(chosen.fit.faults) == 1):
+        return _numerical(search, chosen)
     findings: list[Finding] = []
     for candidate in [chosen, *alike]:
         findings += _findings(search, candidate, refine=True)
@@ -62,6 +63,15 @@ def _explanation(result: CheckResult, progress: Callable[[str], None] | None) ->
         ambiguous=ambiguous,
         remainder=findings[-1].after if not alike else findings[0].after,
     )
+
+
+def _numerical(search: Search, method: Candidate | None) -> Explanation:
+    """The numerical character of the residual, or the residual in words."""
+    after = None if method is None else _findings(search, method, refine=False)[0].after
+    found = character(search, method, after)
+    if found is None:
+        return Explanation(description=describe(search.scene), unexplained=True)
+    return Explanation(findings=(found,), remainder=found.after)
 
 
 def _is_geodesic(scene: Scene, faults: tuple[Fault, ...], numbers: Floats) -> bool:

@@ -97,6 +97,8 @@ class Fault:
         Tells variants apart; also what is reported for a choice.
     numerical : bool
         Whether it is a weakness of the method rather than a mistake.
+    soft : bool
+        Whether it follows a method's errors so well that it must beat them outright.
     includes : tuple of str
         Causes that are this one with particular numbers: named in its place where they fit.
     """
@@ -112,6 +114,7 @@ class Fault:
     choices: int = 0
     label: str = ""
     numerical: bool = False
+    soft: bool = False
     includes: tuple[str, ...] = ()
 
 

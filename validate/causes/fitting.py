@@ -14,7 +14,7 @@ from truefall.validate.causes.fault import Fault
 from truefall.validate.causes.plan import Flyer, first_plan, predicted
 from truefall.validate.causes.scene import Scene
 
-__all__ = ["Fit", "Problem", "fit", "glance", "numbers_of"]
+__all__ = ["Fit", "Problem", "columns_of", "fit", "glance", "numbers_of"]
 
 Floats = npt.NDArray[np.float64]
 Rows = npt.NDArray[np.intp]
@@ -91,15 +91,20 @@ class Fit:
     left: Floats
 
 
-def _jacobian(problem: Problem, faults: Sequence[Fault], numbers: Floats, left: Floats) -> Floats:
+def _jacobian(
+    problem: Problem, faults: Sequence[Fault], numbers: Floats, left: Floats, first: int = 0
+) -> Floats:
+    """Derivatives of what is left by the numbers from ``first`` on."""
     scene = problem.scene
     steps = [p.step * scene.natural(p.kind) for f in faults for p in f.parameters]
-    columns = np.empty((left.size, len(steps)))
+    columns = np.empty((left.size, len(steps) - first))
     for k, step in enumerate(steps):
+        if k < first:
+            continue
         moved = numbers.copy()
         step = max(step, 1e-7 * abs(moved[k]))
         moved[k] += step
-        columns[:, k] = (problem.remainder(faults, moved) - left) / step
+        columns[:, k - first] = (problem.remainder(faults, moved) - left) / step
     return np.clip(columns, -_HUGE, _HUGE)
 
 
@@ -157,10 +162,19 @@ def _arcs(problem: Problem, k: int) -> list[int]:
     return [*arcs, rows.size]
 
 
-def glance(problem: Problem, faults: Sequence[Fault], known: Floats | None = None) -> float:
+def columns_of(problem: Problem, found: Fit) -> Floats:
+    """What the numbers of a fit do to the residual."""
+    return _jacobian(problem, found.faults, found.numbers, found.left)
+
+
+def glance(
+    problem: Problem, faults: Sequence[Fault], known: Floats | None = None,
+    columns_known: Floats | None = None,
+) -> float:  # fmt: skip
     """The cost that faults leave as far as one linear step tells; cheap.
 
-    ``known`` holds numbers already fitted of all faults but the last.
+    ``known`` holds numbers already fitted of all faults but the last, ``columns_known`` what
+    those do to the residual.
     """
     last = faults[-1]
     k = len(last.parameters)
@@ -170,18 +184,19 @@ def glance(problem: Problem, faults: Sequence[Fault], known: Floats | None = Non
         guess = np.concatenate([before, own])
         try:
             left = problem.remainder(faults, guess)
-            cost = float(left @ left)
-            if guess.size:
-                columns = _jacobian(problem, faults, guess, left)
-                size = np.linalg.norm(columns, axis=0)
-                size = np.where(np.isfinite(size) & (size > 0), size, 1.0)
-                scaled = np.nan_to_num(columns / size)
-                step = np.linalg.lstsq(scaled, -left, rcond=1e-11)[0]
-                rest = left + scaled @ step
-                cost = min(cost, float(rest @ rest))
+            best = min(best, float(left @ left))
+            columns = _jacobian(problem, faults, guess, left, before.size)
         except (ValueError, ArithmeticError):
             continue
-        best = min(best, cost)
+        if columns_known is not None:
+            columns = np.hstack([columns_known, columns])
+        if columns.shape[1]:
+            size = np.linalg.norm(columns, axis=0)
+            size = np.where(np.isfinite(size) & (size > 0), size, 1.0)
+            scaled = np.nan_to_num(columns / size)
+            step = np.linalg.lstsq(scaled, -left, rcond=1e-11)[0]
+            rest = left + scaled @ step
+            best = min(best, float(rest @ rest))
     return best
 
 

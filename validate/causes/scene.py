@@ -24,7 +24,7 @@ _EPS = float(np.finfo(np.float64).eps)
 _MOVE = 1e-7
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, eq=False)
 class Scene:
     """Everything in units of GM/c^2, c and GM/c^3 of the declared GM; ``n`` rows.
 
@@ -102,15 +102,19 @@ class Scene:
 
     @cached_property
     def transition(self) -> Floats:
-        """``d state / d start``, (n, 7, 6), by central differences of flights."""
-        columns = np.empty((len(self), 7, 6))
+        """``d state / d start`` at the rows, (n, 7, 6)."""
+        return self.transition_at(self.elapsed)
+
+    def transition_at(self, times: Floats) -> Floats:
+        """``d state / d start``, (k, 7, 6), by central differences of flights."""
+        columns = np.empty((times.size, 7, 6))
         for k in range(6):
             ends = []
             step = _MOVE * float(np.linalg.norm(self.start[:3] if k < 3 else self.start[3:]))
             for sign in (1.0, -1.0):
                 moved = self.start.copy()
                 moved[k] += sign * step
-                ends.append(fly(self.law, moved[:3], moved[3:], self.elapsed, self.patience))
+                ends.append(fly(self.law, moved[:3], moved[3:], times, self.patience))
             change = ends[0].minus(ends[1])
             columns[:, :, k] = np.column_stack([change.position, change.velocity, change.clock]) / (
                 2 * step
@@ -142,7 +146,8 @@ class Scene:
             ),
         ):
             size = np.linalg.norm(values, axis=1)
-            least = 2 * _EPS * size + 1e-300
+            # a size that passes through zero is computed from numbers that do not
+            least = 2 * _EPS * np.maximum(size, 1e-3 * np.nanmax(size, initial=0.0)) + 1e-300
             if guard is not None:
                 digits = (guard.digits / 3 + guard.stamps + guard.carried + guard.bound) / unit
                 least = np.hypot(least, digits)

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import replace
+from functools import lru_cache
 
 import numpy as np
 import numpy.typing as npt
@@ -84,6 +85,12 @@ for _actual in CHARTS:
     register(_charts_time(_actual, "declared"), _charts_time(_actual, "actual"))
 
 
+def _scaled_time(plan: Plan, change: float) -> Plan:
+    if abs(change) > 0.2:
+        raise ValueError("such a factor is a unit's")
+    return replace(plan, stamps=plan.stamps * (1 + change))
+
+
 def _spacing(scene: Scene) -> float:
     return float(np.median(np.diff(scene.elapsed)))
 
@@ -106,6 +113,7 @@ register(
     Fault(
         cause="epoch-shifted",
         family="clock",
+        includes=("samples-shifted",),
         parameters=(Parameter("shift", "time"),),
         apply=lambda plan, _, p: replace(plan, stamps=plan.stamps + p[0]),
         guesses=lambda s: ((_spacing(s),), (-_spacing(s),)),
@@ -116,7 +124,7 @@ register(
         cause="time-scaled",
         family="clock",
         parameters=(Parameter("relative change of time"),),
-        apply=lambda plan, _, p: replace(plan, stamps=plan.stamps * (1 + p[0])),
+        apply=lambda plan, _, p: _scaled_time(plan, p[0]),
         say=lambda f: (
             f"the states run ahead of their stamps by {f.say(0)} of the elapsed time"
             + (
@@ -172,6 +180,7 @@ def _from_row(plan: Plan, row: int, by: int) -> Plan:
     return replace(plan, stamps=np.where(np.arange(late.size) >= row, late, plan.stamps))
 
 
+@lru_cache(maxsize=2)
 def _onset(scene: Scene) -> list[tuple[float, ...]]:
     """Rows from which on the residual may begin: where it jumps."""
     size = np.linalg.norm(scene.residual.position, axis=1)
@@ -200,7 +209,7 @@ def _row_fault(cause: str, by: int, text: str) -> list[Fault]:
     def variant(rank: int) -> Fault:
         return Fault(
             cause, "clock", look_at="the loop that writes the rows", choices=2, label=f"{rank}",
-            wanted=lambda s: len(s) > 8,
+            wanted=lambda s: len(s) > 8, includes=("samples-shifted",),
             apply=lambda plan, scene, p: apply(plan, scene, p, rank),
             say=lambda f: say(f, rank),
         )  # fmt: skip

@@ -73,6 +73,7 @@ def _gm_scaled(launch: str) -> Fault:
         cause="gm-scaled",
         family="constants",
         label=launch,
+        includes=("schwarzschild-radius", "gm-in-wrong-unit", "constants-in-single-precision"),
         parameters=(Parameter("relative change of gm"),),
         apply=lambda plan, _, p: plan.fly_by(gm=plan.law.gm * (1 + p[0]), launch=launch),
         wanted=lambda scene: launch == "own" or scene.law.light,
@@ -87,6 +88,7 @@ register(
     _gm_scaled("given"),
     Fault(
         cause="light-speed-scaled",
+        includes=("schwarzschild-radius", "newtonian"),
         family="constants",
         parameters=(Parameter("relative change of c", step=1e-4),),
         guesses=lambda _: ((3e8 / 299792458 - 1,),),

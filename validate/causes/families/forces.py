@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 from truefall.validate.causes.fault import Fault, Fitted, Parameter, register
 from truefall.validate.causes.plan import Plan
 
@@ -39,6 +41,13 @@ register(
            "a drag of {} times v |v| acts against the motion", "quadratic"),
     _force("drag", (7,), ("drag rate",), "rate",
            "a drag of {} times v acts against the motion", "linear"),
+    replace(
+        _force("energy-dissipation", (7,), ("rate",), "rate",
+               "energy is lost as by a drag of {} times v: the method dissipates, or something "
+               "damps the velocities"),
+        family="numerics",
+        look_at="the damping of the integrator, and anything that rescales velocities",
+    ),
     _force("inverse-cube-term", (8,), ("strength",), "cube",
            "a radial acceleration of {} / r^3 acts besides (outward positive)", "inverse cube"),
     _force("inverse-cube-term", (9,), ("strength",), "fourth",

@@ -26,6 +26,13 @@ _LENGTHS = (
 )  # fmt: skip
 
 
+def _little(change: float) -> float:
+    """A factor near 1; others are a unit's, and on a list."""
+    if abs(change) > 0.2:
+        raise ValueError("such a factor is a unit's")
+    return 1 + change
+
+
 def _scaled(plan: Plan, scene: Scene, place: float, pace: float, start_too: bool) -> Plan:
     def output(s: Sample, _: Rows) -> Sample:
         return Sample(s.position * place, s.velocity * pace, s.clock)
@@ -59,12 +66,12 @@ for _factor, _words in _LENGTHS:
 register(
     Fault("length-scaled", "units", look_at="the unit of lengths",
           parameters=(Parameter("relative change of lengths"),),
-          apply=lambda plan, s, p: _scaled(plan, s, 1 + p[0], 1 + p[0], True),
+          apply=lambda plan, s, p: _scaled(plan, s, _little(p[0]), _little(p[0]), True),
           say=lambda f: f"positions and velocities are too large by {f.say(0)} of themselves"),
     Fault("velocity-scaled", "units", look_at="the unit of velocities",
           parameters=(Parameter("relative change of velocities"),),
           wanted=lambda s: s.has_velocity,
-          apply=lambda plan, s, p: _scaled(plan, s, 1.0, 1 + p[0], True),
+          apply=lambda plan, s, p: _scaled(plan, s, 1.0, _little(p[0]), True),
           say=lambda f: f"the velocities are too large by {f.say(0)} of themselves"),
 )  # fmt: skip
 
