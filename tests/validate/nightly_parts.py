@@ -41,6 +41,10 @@ def exact(orbit):
     velocity = [[-r * rate * math.sin(a), r * rate * math.cos(a), 0.0] for a in angles]
     return times, position, velocity
 
+def with_clock(orbit):
+    t, x, v = exact(orbit)
+    return t, x, v, [s * math.sqrt(1 - 3 / 10) for s in t]
+
 def crash(orbit): raise ValueError("no convergence")
 def die(orbit): os.kill(os.getpid(), signal.SIGSEGV)
 def hang(orbit): time.sleep(1000)

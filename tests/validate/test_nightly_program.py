@@ -61,7 +61,7 @@ int main(int n, char **a)
 def run(tmp_path: Path) -> Callable[..., CaseResult]:
     """Run the circle through one program under test."""
 
-    def one(**words: Any) -> CaseResult:
+    def one(own_budget: bool = False, **words: Any) -> CaseResult:
         suite = read_suite(
             parts.make_suite(tmp_path / "suite", '[propagator.it]\npython = "mine:exact"\n')
         )
@@ -73,6 +73,7 @@ def run(tmp_path: Path) -> Callable[..., CaseResult]:
         job = Job(
             key="it/circle", propagator=Propagator("it", **words), case=case.name,
             spec=case.spec(), folder=str(suite.folder), case_digest=case.digest, kept=False,
+            own_budget=own_budget,
         )  # fmt: skip
         return run_job(job)
 
@@ -131,6 +132,33 @@ def test_python_functions_that_go_wrong(
     assert words in record.reason
     assert record.verdict == ("not-run" if outcome == "could not start" else "unusable")
     assert not record.errors
+
+
+def test_a_budget_of_the_case_is_judged_as_far_as_there_are_columns(
+    run: Callable[..., CaseResult], tmp_path: Path
+) -> None:
+    (tmp_path / "suite").mkdir()
+    program = """
+import json, mine, sys
+t, x, _ = mine.exact(json.load(open(sys.argv[1])))
+rows = "\\n".join(",".join(map(repr, [s, *p])) for s, p in zip(t, x))
+open(sys.argv[2], "w").write("time,x,y,z\\n" + rows)
+"""
+    (tmp_path / "suite" / "it.py").write_text(program)
+    words = {"command": [sys.executable, "it.py", "{orbit}", "{out}"], "reads": "json",
+             "env": {"PYTHONPATH": str(tmp_path / "suite")}}  # fmt: skip
+    lenient = run(**words, own_budget=True).record
+    assert (lenient.verdict, lenient.budget) == ("pass", {"position": 1e-9})
+    assert lenient.reason == "not judged, because the output has no columns for it: velocity"
+    strict = run(**words).record
+    assert (strict.verdict, strict.outcome) == ("unusable", "output refused")
+    assert "budget for velocity" in strict.reason
+
+
+def test_a_function_may_return_the_second_clock(run: Callable[..., CaseResult]) -> None:
+    record = run(python="mine:with_clock").record
+    # on a circle d tau / dt = sqrt(1 - 3/r) (textbook result, from memory)
+    assert record.errors["clock"]["max"] == pytest.approx(0, abs=1e-12)
 
 
 def test_a_module_that_is_not_there_and_one_that_lacks_another(

@@ -35,7 +35,9 @@ _CLOCKS = ("proper_time", "coordinate_time", "affine")
 class Job:
     """What a worker needs to know; everything in it can be sent to another machine.
 
-    ``kept`` says whether expected states may be kept in the worker's own user folder.
+    ``kept`` says whether expected states may be kept in the worker's own user folder;
+    ``own_budget`` that the budget is the case's: of it only what the output has columns for is
+    judged, while a budget of the suite demands the columns.
     """
 
     key: str
@@ -48,6 +50,7 @@ class Job:
     why: str = ""
     repeat: int = 1
     kept: bool = True
+    own_budget: bool = False
 
 
 @dataclass(frozen=True)
@@ -167,11 +170,13 @@ def _run(job: Job) -> CaseResult:
     if job.repeat > 1:
         _, again, _ = _obtain(job, spec)
         repeated = again is not None and _digest(again) == _digest(trajectory)
+    trajectory, left_out = _judgeable(job, trajectory)
     result, reason = _judge(trajectory, orbit)
     if result is None:
         record = blank(job, "output refused", "unusable", reason)
     else:
         record = replace(_figures(job, result), digest=_digest(trajectory))
+        record = replace(record, reason=record.reason or left_out)
         record = explained(record, result, job.kept)
     record = replace(record, digest=_digest(trajectory), **told)
     attributes = {"budget": dict(job.spec.budget), "orbit_class": orbit.orbit_class}
@@ -216,6 +221,31 @@ def _wrong_rows(found: Trajectory, spec: OrbitSpec) -> str:
             "asked for"
         )
     return ""
+
+
+def _judgeable(job: Job, trajectory: Trajectory) -> tuple[Trajectory, str]:
+    """With the tolerances that the output has columns for; a sentence about the others."""
+    budget = dict(trajectory.metadata.get("budget", {}))
+    if not job.own_budget:
+        return trajectory, ""
+    lacking: list[str] = []
+    if trajectory.velocity is None:
+        lacking += ["velocity", "energy", "angular_momentum"]
+    light, proper = job.spec.particle == "light", job.spec.clock == "proper"
+    clock = "affine" if light else "coordinate_time" if proper else "proper_time"
+    if getattr(trajectory, clock) is None:
+        lacking.append("clock")
+    growing = budget.get("per_revolution", {})
+    gone = [q for q in lacking if q in budget or q in growing]
+    if not gone:
+        return trajectory, ""
+    budget = {q: t for q, t in budget.items() if q not in gone}
+    if growing:
+        budget["per_revolution"] = {q: t for q, t in growing.items() if q not in gone}
+    metadata = {**trajectory.metadata, "budget": budget}
+    words = ", ".join(gone).replace("_", " ")
+    sentence = f"not judged, because the output has no columns for it: {words}"
+    return replace(trajectory, metadata=metadata), sentence
 
 
 def _judge(trajectory: Trajectory, orbit: KeptOrbit) -> tuple[CheckResult | None, str]:

@@ -55,11 +55,8 @@ def workplace(reads: str, writes: str) -> Iterator[Workplace]:
     """A fresh folder, removed afterwards."""
     root = Path(tempfile.mkdtemp(prefix="truefall-case-"))
     try:
-        for name in ("work", "in", "out"):
-            (root / name).mkdir()
-        yield Workplace(
-            root, root / "work", root / "in" / f"orbit.{reads}", root / "out" / f"obtained.{writes}"
-        )
+        (root / "work").mkdir()
+        yield Workplace(root, root / "work", root / f"orbit.{reads}", root / f"obtained.{writes}")
     finally:
         shutil.rmtree(root, ignore_errors=True)
 
@@ -245,9 +242,8 @@ def _files(place: Workplace) -> list[Path]:
     """Plain files that the program left in its folders, at most a hundred."""
     found: list[Path] = []
     for folder, _, names in os.walk(place.root):
-        if folder == str(place.root / "in"):
-            continue
-        found += [p for name in sorted(names) if (p := Path(folder, name)).is_file()]
+        paths = [Path(folder, name) for name in sorted(names)]
+        found += [p for p in paths if p != place.orbit and p.is_file()]
         if len(found) > 100:
             break
     return found

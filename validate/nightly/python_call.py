@@ -14,6 +14,13 @@ _WRONG_RESULT, _NO_FUNCTION = 65, 66
 _NAMES = ("time", "position", "velocity")
 
 
+def _second_clock(orbit: dict[str, Any]) -> str:
+    """What a fourth array is."""
+    if orbit["particle"] == "light":
+        return "affine"
+    return "coordinate_time" if orbit["clock"] == "proper" else "proper_time"
+
+
 def _find(name: str) -> Any:
     """The function named "package.module:function"; a sentence where there is none."""
     module, _, path = name.partition(":")
@@ -69,13 +76,15 @@ def call(name: str, suite: str, orbit_path: str, out: str) -> int:
             _NO_FUNCTION,
         )
     returned = function(orbit)
-    wanted = "it must return time (n,), position (n, 3), velocity (n, 3)"
-    if not isinstance(returned, tuple | list) or len(returned) != len(_NAMES):
+    clock = _second_clock(orbit)
+    names = (*_NAMES, clock)
+    wanted = f"it must return time (n,), position (n, 3), velocity (n, 3) and may add {clock} (n,)"
+    if not isinstance(returned, tuple | list) or len(returned) not in (3, 4):
         kind = type(returned).__name__
         count = f" of {len(returned)}" if isinstance(returned, tuple | list) else ""
         return _refuse(out, f"{name} returned {kind}{count}; {wanted}", _WRONG_RESULT)
     arrays: dict[str, Any] = {}
-    for label, values in zip(_NAMES, returned, strict=True):
+    for label, values in zip(names, returned, strict=False):
         try:
             arrays[label] = np.asarray(values, dtype=np.float64)
         except (TypeError, ValueError) as error:

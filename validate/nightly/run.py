@@ -65,7 +65,7 @@ def _jobs(suite: Suite, kept: bool) -> Iterator[Job]:
         yield Job(
             key=f"{propagator.name}/{case.name}", propagator=propagator, case=case.name,
             spec=case.spec(), folder=str(suite.folder), case_digest=case.digest,
-            title=case.title, why=case.why, repeat=suite.repeat, kept=kept,
+            title=case.title, why=case.why, repeat=suite.repeat, kept=kept, own_budget=case.own,
         )  # fmt: skip
 
 
@@ -244,7 +244,8 @@ def pages_module() -> Any:
     import importlib
 
     try:
-        return importlib.import_module("truefall.validate.nightly.pages")
+        found = importlib.import_module("truefall.validate.nightly.pages")
+        return found if hasattr(found, "write_pages") else None
     except ModuleNotFoundError:
         return None
 

@@ -51,7 +51,10 @@ class Propagator:
 
 @dataclass(frozen=True)
 class SuiteCase:
-    """A case of the catalogue, or of an orbit file (``file``); ``budget`` is a [budget] table."""
+    """A case of the catalogue, or of an orbit file (``file``).
+
+    ``budget`` is a [budget] table, ``own`` whether it is the case's and not the suite's.
+    """
 
     name: str
     file: Path | None
@@ -59,6 +62,7 @@ class SuiteCase:
     digest: str
     title: str = ""
     why: str = ""
+    own: bool = False
 
     def spec(self) -> OrbitSpec:
         """The orbit and its times, read when they are needed."""
@@ -321,4 +325,4 @@ def _case(
         spec.position, spec.velocity, spec.elements, spec.times, dict(budget),
     ]  # fmt: skip
     digest = hashlib.sha256(json.dumps(about, sort_keys=True).encode()).hexdigest()[:32]
-    return SuiteCase(name, file, dict(budget), digest, title, why)
+    return SuiteCase(name, file, dict(budget), digest, title, why, chosen not in budgets)
