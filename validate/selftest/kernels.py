@@ -172,7 +172,7 @@ def hold_kernels(
     *,
     prepare: str = f"{_SCENARIOS}:prepare",
     limit: float = LIMIT,
-    progress: Callable[[str], None] = lambda name: None,
+    progress: Callable[[str], None] | None = None,
 ) -> list[Held]:
     """Hold every compiled function of some packages against its interpreted source.
 
@@ -199,16 +199,17 @@ def hold_kernels(
         from truefall.validate.selftest.scenarios import SCENARIOS
 
         scenarios = [f"{_SCENARIOS}:{name}" for name in SCENARIOS]
+    tell = progress or (lambda _: None)
     with tempfile.TemporaryDirectory(prefix="truefall-selftest-") as folder:
         file = Path(folder) / "calls.pickle"
-        progress("the sources, interpreted")
+        tell("the sources, interpreted")
         _record(file, packages, scenarios, RECORDING_LIMIT)
         calls, failures = pickle.loads(file.read_bytes())
         if failures:
             scenario, text = failures[0]
             last = text.strip().splitlines()[-1]
             raise ScenarioFailed(f"{scenario.partition(':')[2]}, interpreted: {last}\n{text}")
-        lines, names, strangers = _replay(file, packages, prepare, limit, progress)
+        lines, names, strangers = _replay(file, packages, prepare, limit, tell)
     every = sorted({*names, *calls})
     held = [_outcome(lines.get(n), n, len(calls.get(n, ())), allowed(n)) for n in every]
     return held + [Held(name, "unknown") for name in strangers]

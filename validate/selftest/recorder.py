@@ -10,24 +10,32 @@ from __future__ import annotations
 
 import functools
 import importlib
+import math
 import pickle
 import pkgutil
 import sys
 import threading
 import traceback
+import types
 from collections.abc import Callable, Sequence
 from pathlib import Path
 from typing import Any
+
+from truefall.validate.selftest.arguments import Kept, keep, size
 
 __all__ = ["Call", "full_name", "import_all", "main"]
 
 #: Calls of a function that are kept, by number: the first ones and some later.
 _KEPT = (1, 2, 3, 7, 20, 50, 120, 300, 1000)
+_MATHEMATICS = (
+    "sqrt", "sin", "cos", "tan", "asin", "acos", "atan", "atan2", "exp", "expm1", "log", "log1p",
+    "log2", "log10", "hypot", "pow", "sinh", "cosh", "tanh",
+)  # fmt: skip
 #: Largest arguments that are kept, in bytes.
 _MOST_BYTES = 4_000_000
 
 #: Arguments before the call, arguments after it, value.
-Call = tuple[tuple[Any, ...], tuple[Any, ...], Any]
+Call = tuple[Kept, Kept, Kept]
 
 
 def full_name(function: Callable[..., Any]) -> str:
@@ -44,16 +52,6 @@ def import_all(packages: Sequence[str]) -> None:
                 importlib.import_module(place.name)
 
 
-def _copied(value: Any) -> Any:
-    if hasattr(value, "copy") and hasattr(value, "dtype") and value.ndim > 0:
-        return value.copy()
-    return tuple(_copied(item) for item in value) if isinstance(value, tuple) else value
-
-
-def _size(values: tuple[Any, ...]) -> int:
-    return sum(int(getattr(value, "nbytes", 0)) for value in values)
-
-
 class _Store:
     """What was recorded: calls by function, and functions that were never called."""
 
@@ -67,7 +65,7 @@ class _Store:
         with self._lock:
             self._count[name] += 1
             number = self._count[name]
-        return number in _KEPT and _size(arguments) <= _MOST_BYTES
+        return number in _KEPT and size(arguments) <= _MOST_BYTES
 
     def wrapped(self, function: Callable[..., Any]) -> Callable[..., Any]:
         """The function, recording; registered by its name."""
@@ -75,13 +73,17 @@ class _Store:
         self.calls.setdefault(name, [])
         self._count.setdefault(name, 0)
 
+        made: list[Any] = []
+
         @functools.wraps(function)
         def recording(*arguments: Any) -> Any:
+            if not made:  # not before the first call, when the module has all its names
+                made.append(_soft(function))
             if not self.due(name, arguments):
-                return function(*arguments)
-            before = _copied(arguments)
-            value = function(*arguments)
-            self.calls[name].append((before, _copied(arguments), _copied(value)))
+                return made[0](*arguments)
+            before = keep(arguments)
+            value = made[0](*arguments)
+            self.calls[name].append((before, keep(arguments), keep((value,))))
             return value
 
         recording.py_func = function  # type: ignore[attr-defined]
@@ -96,6 +98,37 @@ def _decorator(store: _Store) -> Callable[..., Any]:
         return store.wrapped
 
     return njit
+
+
+def _ieee(function: Callable[..., float]) -> Callable[..., Any]:
+    """A function of ``math`` as compiled code has it: IEEE's numbers, where Python raises."""
+    import numpy as np
+
+    @functools.wraps(function)
+    def softened(*values: Any) -> Any:
+        try:
+            return np.float64(function(*values))
+        except ValueError:
+            return np.float64(np.nan)
+        except OverflowError:
+            return np.float64(np.inf)
+
+    return softened
+
+
+def _soft(function: Any) -> Any:
+    """The function with IEEE's mathematics; the module keeps its own names."""
+    soft = {getattr(math, name): _ieee(getattr(math, name)) for name in _MATHEMATICS}
+    names = dict(function.__globals__)
+    for name in function.__code__.co_names:
+        found = names.get(name)
+        if isinstance(found, types.BuiltinFunctionType) and found in soft:
+            names[name] = soft[found]
+    made = types.FunctionType(
+        function.__code__, names, function.__name__, function.__defaults__, function.__closure__
+    )
+    made.__kwdefaults__ = function.__kwdefaults__
+    return made
 
 
 def main(arguments: Sequence[str]) -> int:

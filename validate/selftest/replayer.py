@@ -14,7 +14,8 @@ from collections.abc import Sequence
 from pathlib import Path
 from typing import Any
 
-from truefall.validate.selftest.recorder import Call, _copied, full_name, import_all
+from truefall.validate.selftest.arguments import give
+from truefall.validate.selftest.recorder import Call, full_name, import_all
 
 __all__ = ["distance", "main"]
 
@@ -89,9 +90,9 @@ def _held(kernel: Any, calls: Sequence[Call]) -> float:
     """Largest distance over the calls, of value and of every argument."""
     worst = 0.0
     for before, after, value in calls:
-        given = _copied(before)
+        given = give(before)
         obtained = kernel(*given)
-        worst = max(worst, distance(obtained, value), distance(given, after))
+        worst = max(worst, distance((obtained,), give(value)), distance(given, give(after)))
     return worst
 
 

@@ -77,7 +77,8 @@ def _openness(
         s[k] = keep
         width = half_unit / (2.0 * step)
         out[0] += abs(e - e2) * width
-        out[1] += sqrt((a - a2) ** 2 + (b - b2) ** 2 + (c - c2) ** 2) * width
+        a, b, c = a - a2, b - b2, c - c2
+        out[1] += sqrt(a * a + b * b + c * c) * width
 
 
 @njit(cache=True, error_model="numpy", nogil=True)

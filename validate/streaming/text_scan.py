@@ -36,7 +36,7 @@ def _exponent(data: npt.NDArray[np.uint8], start: int, stop: int) -> tuple[int, 
     for k in range(first, min(stop, first + 10)):
         if data[k] < 48 or data[k] > 57:
             break
-        value = value * 10 + data[k] - 48
+        value = value * 10 + (int(data[k]) - 48)
         i = k + 1
     if i == first or i - first > 9:
         return 0, -1
