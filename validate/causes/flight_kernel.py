@@ -33,11 +33,12 @@ def _metric(chart: int, rho: float) -> tuple[float, ...]:
     if chart == 1:  # isotropic, m = 1/(2 rho)
         m = 0.5 / rho
         up, down = 1.0 + m, 1.0 - m
-        f = (down / up) ** 2
-        p = up**4
-        slope = -4.0 * m * up**3 / rho
+        f = (down / up) * (down / up)
+        cube = up * up * up
+        p = cube * up
+        slope = -4.0 * m * cube / rho
         return (
-            -f, -4.0 * m * down / (rho * up**3), 0.0, 0.0, p, slope, rho * rho * p,
+            -f, -4.0 * m * down / (rho * cube), 0.0, 0.0, p, slope, rho * rho * p,
             2.0 * rho * p + rho * rho * slope,
         )  # fmt: skip
     r = rho + 1.0 if chart == 2 else rho
