@@ -285,6 +285,19 @@ def test_elements_become_position_and_velocity(tmp_path: Path) -> None:
     assert np.allclose(orbit.known.position, exact.at([0.0, 5.0]).position, rtol=1e-15, atol=1e-14)
 
 
+def test_of_long_cases_some_exact_states_are_kept(tmp_path: Path) -> None:
+    from truefall.validate.nightly.one_case import _given
+
+    path = parts.make_suite(tmp_path / "s", '[propagator.p]\npython = "mine:exact"\n', count=20001)
+    spec = read_suite(path).cases[0].spec()
+    given, orbit = _given(
+        Job("p/c", Propagator("p", python="m:f"), "c", spec, str(tmp_path), kept=False)
+    )
+    assert given.times == spec.times
+    assert orbit.known.time.size == 953  # every 21st
+    assert set(orbit.known.time) <= set(spec.times or ())
+
+
 def test_a_failing_case_is_explained(run: Callable[..., CaseResult], tmp_path: Path) -> None:
     (tmp_path / "suite").mkdir()
     (tmp_path / "suite" / "scale").write_text("1e-3")

@@ -36,6 +36,8 @@ _ORDER = (70, 4, 1, 3, 5, 0)
 _STATUS = {"unusable": 4, "not-run": 4, "fail": 1, "undecided": 3, "not-judged": 5, "pass": 0}
 _MANY_CASES = 1000
 _FEW_POINTS = 20
+#: Rows of trends in a report, and nights that are shown however many cases there are.
+_MOST_ROWS, _LEAST_NIGHTS = 200_000, 30
 
 
 @contextlib.contextmanager
@@ -259,7 +261,10 @@ def _pages(night: Night, trends: Trends, out: Path) -> None:
     unfinished = out / f".report-{night.number:05d}.unfinished"
     shutil.rmtree(unfinished, ignore_errors=True)
     unfinished.mkdir()
-    pages.write_pages(night, trends.trends([c.key for c in night.cases]), unfinished)
+    keys = [c.key for c in night.cases]
+    pages.write_pages(
+        night, trends.trends(keys, max(_LEAST_NIGHTS, _MOST_ROWS // max(1, len(keys)))), unfinished
+    )
     shutil.rmtree(final, ignore_errors=True)
     unfinished.rename(final)
     copy = out / ".latest.unfinished"

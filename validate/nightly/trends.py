@@ -166,12 +166,18 @@ class Trends:
                 ).fetchall()
         return {row[0]: Past(*row[1:6], *(json.loads(text) for text in row[6:])) for row in rows}
 
-    def trends(self, keys: Sequence[str] | None = None) -> Mapping[str, Trend]:
-        """All figures over the nights, by key."""
+    def trends(
+        self, keys: Sequence[str] | None = None, latest: int | None = None
+    ) -> Mapping[str, Trend]:
+        """Figures over the nights, by key; of the ``latest`` so many nights, or of all."""
+        numbers = self.numbers()
+        first = 0 if latest is None or len(numbers) <= latest else numbers[-latest]
         found: dict[str, list[tuple[int, float | None, str, int, float]]] = {}
         wanted = None if keys is None else set(keys)
         for key, *row in self._base.execute(
-            "SELECT key, night, error, verdict, segment, seconds FROM figures ORDER BY key, night"
+            "SELECT key, night, error, verdict, segment, seconds FROM figures WHERE night >= ? "
+            "ORDER BY key, night",
+            (first,),
         ):
             if wanted is None or key in wanted:
                 found.setdefault(key, []).append(tuple(row))
