@@ -1,0 +1,154 @@
+"""The pages in a real browser (the distribution's Chromium): layout, keyboard, names, no script."""
+
+from __future__ import annotations
+
+import importlib.util
+import sys
+import time
+from pathlib import Path
+
+import pytest
+
+from truefall.validate.nightly.pages import write_pages
+
+_SPEC = importlib.util.spec_from_file_location(
+    "night_pages_data", Path(__file__).with_name("night_pages_data.py")
+)
+assert _SPEC is not None
+data = importlib.util.module_from_spec(_SPEC)
+sys.modules["night_pages_data"] = data
+assert _SPEC.loader is not None
+_SPEC.loader.exec_module(data)
+
+
+@pytest.fixture(scope="module")
+def pages(tmp_path_factory):
+    """Two nights on disk: a large one, and one whose every text is hostile."""
+    folder = tmp_path_factory.mktemp("pages")
+    for name, (night, trends) in (("large", data.large_night()), ("hostile", data.hostile_night())):
+        (folder / name).mkdir()
+        write_pages(night, trends, folder / name)
+    return folder
+
+
+@pytest.fixture(scope="module")
+def browser(request):
+    """One Chromium for all tests of this file."""
+    tool = request.getfixturevalue("require_tool")("chromium")
+    sync = pytest.importorskip("playwright.sync_api")
+    with sync.sync_playwright() as playwright:
+        found = playwright.chromium.launch(executable_path=tool, args=["--no-sandbox"])
+        yield found
+        found.close()
+
+
+def opened(browser, path, width, scheme="light"):
+    page = browser.new_page(viewport={"width": width, "height": 900}, color_scheme=scheme)
+    page.goto(path.as_uri())
+    return page
+
+
+@pytest.mark.parametrize("width", [380, 1400])
+@pytest.mark.parametrize("name", ["large", "hostile"])
+def test_nothing_overflows_also_with_everything_unfolded(browser, pages, name, width):
+    """The page is as wide as the window; so is every element of it that is shown."""
+    page = opened(browser, pages / name / "index.html", width)
+    page.evaluate("document.querySelectorAll('details').forEach(d => d.open = true)")
+    wide = page.evaluate("document.documentElement.scrollWidth")
+    outside = page.evaluate(
+        "[...document.querySelectorAll('main *')].filter(e => !e.closest('thead') && "
+        "!e.closest('pre') && e.getBoundingClientRect().right > innerWidth + 1).length"
+    )
+    page.close()
+
+    assert wide == width
+    assert outside == 0
+
+
+def test_it_opens_within_two_seconds_and_needs_no_network_and_no_script(browser, pages):
+    """Sixty cases, four hundred nights; JavaScript switched off; every request counted."""
+    context = browser.new_context(java_script_enabled=False)
+    page = context.new_page()
+    asked = []
+    page.on("request", lambda request: asked.append(request.url))
+    begin = time.perf_counter()
+    page.goto((pages / "large" / "index.html").as_uri())
+    text = page.text_content("main")
+    took = time.perf_counter() - begin
+    context.close()
+
+    assert took < 2
+    assert len(asked) == 1
+    assert "ours/case-59" in text
+
+
+def test_a_hostile_name_runs_no_script(browser, pages):
+    """The title is what the page gave it, and the name is shown as it is."""
+    page = opened(browser, pages / "hostile" / "index.html", 1400)
+    title = page.title()
+    shown = page.text_content("#cases + table")
+    page.close()
+
+    assert title.startswith("Night 400 of <script>")
+    assert "broken" not in title.split("truefall")[-1]
+    assert "document.title='broken'" in shown
+
+
+def test_the_keyboard_reaches_everything_and_the_focus_is_seen(browser, pages):
+    """The first stop skips to the report; a summary opens with Enter; an outline shows where."""
+    page = opened(browser, pages / "large" / "index.html", 1400)
+    page.keyboard.press("Tab")
+    first = page.evaluate("document.activeElement.textContent")
+    page.keyboard.press("Enter")
+    page.keyboard.press("Tab")
+    outline = page.evaluate("getComputedStyle(document.activeElement).outlineStyle")
+    page.focus("tr.more summary")
+    page.keyboard.press("Enter")
+    unfolded = page.evaluate("document.querySelector('tr.more details').open")
+    page.close()
+
+    assert first == "To the report"
+    assert outline == "solid"
+    assert unfolded
+
+
+def test_names_for_those_who_cannot_see(browser, pages):
+    """Language, one first heading, headers with scope, a name for every picture."""
+    page = opened(browser, pages / "large" / "index.html", 1400)
+    found = page.evaluate(
+        """() => ({
+          lang: document.documentElement.lang,
+          h1: document.querySelectorAll('h1').length,
+          unscoped: [...document.querySelectorAll('th')].filter(t => !t.scope).length,
+          unnamed: [...document.querySelectorAll('svg')].filter(
+            s => s.getAttribute('role') !== 'img' || !s.getAttribute('aria-label')).length,
+          captions: [...document.querySelectorAll('table')].filter(t => !t.caption).length,
+          main: document.querySelectorAll('main').length,
+        })"""
+    )
+    page.close()
+
+    assert found == {"lang": "en", "h1": 1, "unscoped": 0, "unnamed": 0, "captions": 0, "main": 1}
+
+
+CONTRAST = """(selector) => {
+  const numbers = c => c.match(/[\\d.]+/g).slice(0, 3).map(Number);
+  const light = c => { const [r, g, b] = numbers(c).map(v => { v /= 255;
+    return v <= 0.03928 ? v / 12.92 : ((v + 0.055) / 1.055) ** 2.4; });
+    return 0.2126 * r + 0.7152 * g + 0.0722 * b; };
+  const back = light(getComputedStyle(document.body).backgroundColor);
+  return [...document.querySelectorAll(selector)].map(e => {
+    const ink = light(getComputedStyle(e).color);
+    return (Math.max(ink, back) + 0.05) / (Math.min(ink, back) + 0.05); });
+}"""
+
+
+@pytest.mark.parametrize("scheme", ["light", "dark"])
+def test_contrast_is_enough_in_light_and_dark(browser, pages, scheme):
+    """4.5 to 1 for text (WCAG 2.2, success criterion 1.4.3), computed from the page's colours."""
+    page = opened(browser, pages / "large" / "index.html", 1400, scheme)
+    ratios = page.evaluate(CONTRAST, ".v, .soft, p, th, td, caption, a")
+    page.close()
+
+    assert len(ratios) > 500
+    assert min(ratios) >= 4.5
