@@ -61,7 +61,7 @@ int main(int n, char **a)
 def run(tmp_path: Path) -> Callable[..., CaseResult]:
     """Run the circle through one program under test."""
 
-    def one(own_budget: bool = False, **words: Any) -> CaseResult:
+    def one(own_budget: bool = False, kept: bool = False, **words: Any) -> CaseResult:
         suite = read_suite(
             parts.make_suite(tmp_path / "suite", '[propagator.it]\npython = "mine:exact"\n')
         )
@@ -72,7 +72,7 @@ def run(tmp_path: Path) -> Callable[..., CaseResult]:
             words |= {"reads": "json", "writes": "npz"}
         job = Job(
             key="it/circle", propagator=Propagator("it", **words), case=case.name,
-            spec=case.spec(), folder=str(suite.folder), case_digest=case.digest, kept=False,
+            spec=case.spec(), folder=str(suite.folder), case_digest=case.digest, kept=kept,
             own_budget=own_budget,
         )  # fmt: skip
         return run_job(job)
@@ -308,3 +308,33 @@ def test_a_failing_case_is_explained(run: Callable[..., CaseResult], tmp_path: P
     assert record.margin < 0
     assert record.findings or record.description
     json.dumps(record.findings, allow_nan=False)
+
+
+def test_causes_are_kept_and_what_takes_too_long_is_tried_three_times(
+    run: Callable[..., CaseResult], tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    import truefall.validate.causes as causes
+    from truefall.validate.nightly import explained
+
+    monkeypatch.setattr(explained, "kept_folder", lambda: str(tmp_path))
+    monkeypatch.setattr(explained, "_LONGEST", 0.05)
+    calls = []
+
+    def endless(_: object) -> None:
+        calls.append(1)
+        time.sleep(5)
+
+    monkeypatch.setattr(causes, "explain", endless)
+    (tmp_path / "suite").mkdir()
+    (tmp_path / "suite" / "scale").write_text("1e-3")
+    for count in (1, 2, 3, 3):
+        record = run(python="mine:exact", kept=True).record
+        assert record.description == "no cause was found within 0.05 s"
+        assert len(calls) == count
+    for path in tmp_path.glob("causes-*"):
+        path.write_text("{}")
+    found = causes.Explanation(description="something else")
+    monkeypatch.setattr(causes, "explain", lambda _: (calls.append(1), found)[1])
+    for _ in range(2):
+        assert run(python="mine:exact", kept=True).record.description == "something else"
+        assert len(calls) == 4

@@ -13,7 +13,7 @@ from contextlib import contextmanager
 from dataclasses import replace
 from functools import cache
 from pathlib import Path
-from typing import TYPE_CHECKING, NoReturn
+from typing import TYPE_CHECKING, Any, NoReturn
 
 from truefall.validate.nightly.kept import kept_folder
 from truefall.validate.nightly.record import CaseRecord
@@ -24,6 +24,8 @@ if TYPE_CHECKING:
 __all__ = ["explained"]
 
 _LONGEST = 30.0
+#: How many nights try again what took too long.
+_ATTEMPTS = 3
 
 
 class _TooLongError(Exception):
@@ -84,12 +86,21 @@ def explained(record: CaseRecord, result: CheckResult, kept: bool) -> CaseRecord
     if result.verdict != "fail" or result.comparison is None:
         return record
     path = _path(record) if kept else None
-    if path is not None:
-        with contextlib.suppress(OSError, ValueError, KeyError, TypeError):
-            stored = json.loads(path.read_text("utf-8"))
-            return replace(
-                record, findings=tuple(stored["findings"]), description=stored["description"]
-            )
+    stored = None if path is None else _read(path)
+    attempts = 0 if stored is None else int(stored["attempts"])
+    if stored is None or 0 < attempts < _ATTEMPTS:
+        stored = _searched(result, attempts)
+        if path is not None and stored is not None:
+            _write(path, stored)
+    if stored is None:
+        return replace(record, description="the search for causes failed")
+    return replace(
+        record, findings=tuple(stored["findings"]), description=str(stored["description"])
+    )
+
+
+def _searched(result: CheckResult, attempts: int) -> dict[str, Any] | None:
+    """What the search says; ``attempts`` counts the nights on which it took too long."""
     try:
         with _at_most(_LONGEST):
             from truefall.validate.causes import explain
@@ -97,19 +108,29 @@ def explained(record: CaseRecord, result: CheckResult, kept: bool) -> CaseRecord
             found = explain(result)
         words = {
             "findings": [f.as_json() for f in found.findings],
-            "description": str(found.description),
-        }
-        text = json.dumps(words)
+            "description": str(found.description), "attempts": 0,
+        }  # fmt: skip
+        plain: dict[str, Any] = json.loads(json.dumps(words))
+        return plain
     except _TooLongError:
-        return replace(record, description=f"no cause was found within {_LONGEST:g} s")
-    except Exception as error:  # a help for the reader: the verdict does not depend on it
-        return replace(
-            record, description=f"the search for causes failed ({type(error).__name__}: {error})"
-        )
-    if path is not None:
-        with contextlib.suppress(OSError):
-            temporary = path.with_name(f".{path.name}.{os.getpid()}")
-            temporary.write_text(text, "utf-8")
-            temporary.replace(path)
-    plain = json.loads(text)
-    return replace(record, findings=tuple(plain["findings"]), description=plain["description"])
+        sentence = f"no cause was found within {_LONGEST:g} s"
+        return {"findings": [], "description": sentence, "attempts": attempts + 1}
+    except Exception:  # a help for the reader: the verdict does not depend on it
+        return None
+
+
+def _read(path: Path) -> dict[str, Any] | None:
+    """What an earlier night found; None where nothing of use is there."""
+    try:
+        stored = json.loads(path.read_text("utf-8"))
+        usable = isinstance(stored["findings"], list) and isinstance(stored["attempts"], int)
+        return {**stored, "description": stored["description"]} if usable else None
+    except (OSError, ValueError, KeyError, TypeError):
+        return None
+
+
+def _write(path: Path, words: dict[str, Any]) -> None:
+    with contextlib.suppress(OSError):
+        temporary = path.with_name(f".{path.name}.{os.getpid()}-{threading.get_ident()}")
+        temporary.write_text(json.dumps(words), "utf-8")
+        temporary.replace(path)
