@@ -22,6 +22,7 @@ from truefall.validate.cli_parts import (
 )
 from truefall.validate.errors import InputError, UsageError
 from truefall.validate.nightly.command import nightly
+from truefall.validate.selftest.command import selftest
 from truefall.validate.terminal import prepare_streams, say, silence, working
 
 if TYPE_CHECKING:
@@ -201,6 +202,7 @@ cli.add_command(nightly)
 cli.add_command(make)
 cli.add_command(convert)
 cli.add_command(bench)
+cli.add_command(selftest)
 
 
 def _fault(error: BaseException) -> str:
