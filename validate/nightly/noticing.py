@@ -25,6 +25,12 @@ from truefall.validate.nightly.suite import Thresholds
 
 __all__ = ["Accepted", "Noticed", "Past", "Setting", "notice"]
 
+_LEVELS = ("alarm", "standing", "note")
+#: What is told first.
+_GRAVITY = {
+    "verdict-changed": 0, "error-grew": 1, "slow-drift": 2, "case-vanished": 3, "margin-shrank": 4,
+    "not-deterministic": 5, "bits-changed": 6,
+}  # fmt: skip
 #: Allows for the rounding of "a factor of two" itself.
 _SLACK = 1.0 - 1e-9
 
@@ -129,8 +135,7 @@ def notice(
         else:
             found.append(_again(record, past, setting, alarms))
     missing = _missing({c.key for c in cases}, before, setting, alarms)
-    order = {"alarm": 0, "standing": 1, "note": 2}
-    alarms.sort(key=lambda a: order[a.level])
+    alarms.sort(key=lambda a: (_LEVELS.index(a.level), _GRAVITY.get(a.name, 9)))
     return Noticed(tuple(alarms), tuple(found), missing)
 
 
@@ -256,10 +261,12 @@ def _say(
     name: str, level: str, which: Sequence[tuple[str, float, float]], since: str,
     record: CaseRecord, setting: Setting, alarms: list[Alarm],
 ) -> None:  # fmt: skip
-    """One alarm for all quantities of a case, the one that changed most first."""
+    """One alarm for all quantities of a case: position first, then by how much they changed."""
     if not which:
         return
-    ordered = sorted(which, key=lambda w: -(w[2] / w[1] if w[1] > 0 else float("inf")))
+    ordered = sorted(
+        which, key=lambda w: (w[0] != "position", -(w[2] / w[1] if w[1] > 0 else float("inf")))
+    )
     quantity, before, after = ordered[0]
     factor = f"{after / before:.3g} times" if before > 0 else "from nothing"
     verb = {"error-grew": "grew", "slow-drift": "drifted", "still-worse": "is still",
