@@ -5,6 +5,11 @@ from __future__ import annotations
 import textwrap
 from concurrent.futures import Executor, ThreadPoolExecutor
 from pathlib import Path
+from typing import Any
+
+from truefall.validate.nightly.record import Night
+from truefall.validate.nightly.run import run_night
+from truefall.validate.nightly.suite import read_suite
 
 #: A circle r = 10 in geometric units: the angular velocity is r^(-3/2), Kepler's law, exact for
 #: circles in the areal chart (textbook result, from memory).
@@ -97,3 +102,25 @@ class ThreadWorkers:
     def stop(self) -> None:
         if self._executor is not None:
             self._executor.shutdown(cancel_futures=True)
+
+
+BODY = '[propagator.it]\npython = "mine:exact"\n'
+
+
+class House:
+    """A suite in a folder, its nights beside it."""
+
+    def __init__(self, folder: Path, body: str = BODY) -> None:
+        self.suite = make_suite(folder, body)
+        self.folder, self.out = folder, folder / "nights-of-it"
+
+    def night(self, **words: Any) -> Night:
+        words.setdefault("workers", ThreadWorkers())
+        night: Night = run_night(read_suite(self.suite), self.out, **words)
+        return night
+
+    def file(self, number: int) -> Path:
+        return self.out / "nights" / f"night-{number:05d}.h5"
+
+    def scale(self, value: float) -> None:
+        (self.folder / "scale").write_text(repr(value))

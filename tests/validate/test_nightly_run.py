@@ -5,7 +5,6 @@ from __future__ import annotations
 import importlib.util
 import json
 import os
-import signal
 import sqlite3
 import stat
 import subprocess
@@ -22,8 +21,7 @@ from truefall.validate.cli import main
 from truefall.validate.errors import InputError, UsageError
 from truefall.validate.nightly.night_file import nights_in, read_night
 from truefall.validate.nightly.record import Night
-from truefall.validate.nightly.run import accept_cases, rebuild, run_night
-from truefall.validate.nightly.suite import read_suite
+from truefall.validate.nightly.run import accept_cases, rebuild
 
 
 def _sibling(name: str) -> Any:
@@ -40,26 +38,8 @@ def _sibling(name: str) -> Any:
 
 parts = _sibling("nightly_parts")
 
-BODY = '[propagator.it]\npython = "mine:exact"\n'
-
-
-class House:
-    """A suite in a folder, its nights beside it."""
-
-    def __init__(self, folder: Path, body: str = BODY) -> None:
-        self.suite = parts.make_suite(folder, body)
-        self.folder, self.out = folder, folder / "nights-of-it"
-
-    def night(self, **words: Any) -> Night:
-        words.setdefault("workers", parts.ThreadWorkers())
-        night: Night = run_night(read_suite(self.suite), self.out, **words)
-        return night
-
-    def file(self, number: int) -> Path:
-        return self.out / "nights" / f"night-{number:05d}.h5"
-
-    def scale(self, value: float) -> None:
-        (self.folder / "scale").write_text(repr(value))
+BODY = parts.BODY
+House = parts.House
 
 
 @pytest.fixture
@@ -100,7 +80,7 @@ def test_the_result_set_conforms_and_its_truth_is_the_truth(house: House) -> Non
     house.night()
     found = inspect_set(house.file(1), verify=5)
     assert found.faults == []
-    assert found.trajectories[0]["verified"] == 5
+    assert 1 <= found.trajectories[0]["verified"] <= 5  # random rows, some of them the same
     assert found.trajectories[0]["outside"] == 0
 
 
@@ -211,111 +191,7 @@ def test_two_runs_of_a_case_are_compared_when_asked(house: House) -> None:
     assert "not-deterministic" in names(house.night())
 
 
-# interrupted -----------------------------------------------------------------------------------
-
-KILLER = """
-import importlib.util, os, signal, sys
-from pathlib import Path
-import truefall.validate.nightly.run as run
-import truefall.validate.nightly.night_file as night_file
-import truefall.validate.nightly.trends as trends
-from truefall.validate.nightly.suite import read_suite
-
-spec = importlib.util.spec_from_file_location("nightly_parts", sys.argv[1])
-parts = importlib.util.module_from_spec(spec)
-spec.loader.exec_module(parts)
-where, suite, out = sys.argv[2], Path(sys.argv[3]), Path(sys.argv[4])
-
-def die(*_, **__):
-    os.kill(os.getpid(), signal.SIGKILL)
-
-def after(function):
-    def wrapped(*a, **k):
-        function(*a, **k)
-        die()
-    return wrapped
-
-def half_written(self, *_):
-    self._file.flush()
-    die()
-
-if where == "after a result":
-    night_file.NightWriter.add = after(night_file.NightWriter.add)
-elif where == "half written":
-    night_file.NightWriter._close = half_written
-elif where == "before it is a night":
-    night_file.os.link = die
-elif where == "as soon as it is a night":
-    night_file.os.link = after(os.link)
-elif where == "inside the database":
-    trends.Trends._forget = after(trends.Trends._forget)
-elif where == "after the database":
-    trends.Trends.add = after(trends.Trends.add)
-elif where == "while pages are written":
-    run.pages_module = lambda: type("P", (), {"write_pages": staticmethod(die)})
-elif where == "while the folder is put in place":
-    def one_page(night, trends, folder):
-        (folder / "index.html").write_text("")
-    run.pages_module = lambda: type("P", (), {"write_pages": staticmethod(one_page)})
-    run.shutil.copytree = die
-run.run_night(read_suite(suite), out, workers=parts.ThreadWorkers())
-"""
-
-PLACES = {
-    "after a result": False, "half written": False, "before it is a night": False,
-    "as soon as it is a night": True, "inside the database": True, "after the database": True,
-    "while pages are written": True, "while the folder is put in place": True,
-}  # fmt: skip
-
-
-@pytest.mark.parametrize("where", PLACES)
-def test_killed_at_any_instant_and_run_again_at_once(
-    house: House, tmp_path: Path, where: str
-) -> None:
-    house.night()
-    (house.out / "report-00001").mkdir(exist_ok=True)
-    script = tmp_path / "killer.py"
-    script.write_text(KILLER)
-    shared = Path(__file__).with_name("nightly_parts.py")
-    done = subprocess.run(
-        [sys.executable, script, shared, where, house.suite, house.out], capture_output=True
-    )
-    assert done.returncode == -signal.SIGKILL, done.stderr.decode()
-    complete = PLACES[where]
-    assert nights_in(house.out / "nights") == ([1, 2] if complete else [1])
-    night = house.night()
-    count = 3 if complete else 2
-    assert (night.number, night.previous, night.alarms) == (count, count - 1, ())
-    assert nights_in(house.out / "nights") == list(range(1, count + 1))
-    files = sorted(p.name for p in (house.out / "nights").iterdir())
-    assert files == [f"night-{n:05d}.h5" for n in range(1, count + 1)]  # no leftovers
-    for number in range(1, count + 1):
-        assert read_night(house.file(number)).number == number
-    with sqlite3.connect(house.out / "trends.sqlite") as base:
-        rows = base.execute("SELECT night, key FROM figures ORDER BY night").fetchall()
-    base.close()
-    assert rows == [(n, "it/circle") for n in range(1, count + 1)]
-
-
-def test_a_failing_night_leaves_nothing(house: House, monkeypatch: pytest.MonkeyPatch) -> None:
-    import truefall.validate.nightly.run as module
-
-    def no(*_: object) -> None:
-        raise KeyboardInterrupt
-
-    monkeypatch.setattr(module, "_compare", no)
-    with pytest.raises(KeyboardInterrupt):
-        house.night()
-    assert list((house.out / "nights").iterdir()) == []
-
-
-def test_two_nights_at_once_are_refused(house: House) -> None:
-    import truefall.validate.nightly.run as module
-
-    house.out.mkdir()
-    with module._locked(house.out), pytest.raises(InputError, match="another night is running"):
-        house.night()
-    assert house.night().number == 1
+# made again, refused ---------------------------------------------------------------------------
 
 
 def test_everything_is_made_again_from_the_nights(house: House) -> None:

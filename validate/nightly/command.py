@@ -94,22 +94,18 @@ def nightly(
 
 def _tell(night: Night, folder: Path, as_json: bool) -> None:
     """One line on stdout, what was noticed and where things are on stderr."""
-    from truefall.validate.nightly.night_file import night_as_json
-    from truefall.validate.nightly.run import pages_module, report_folder
+    from truefall.validate.nightly.pages import summary_line
+    from truefall.validate.nightly.run import report_folder
 
-    pages, report = pages_module(), report_folder(folder, night.number)
-    line = pages.summary_line(night) if pages else f"{night.suite}: {night.verdict}"
-    say(line, err=as_json)
+    report = report_folder(folder, night.number)
+    say(summary_line(night), err=as_json)
     for alarm in night.alarms:
         if alarm.level != "note":
             say(f"{alarm.name}: {alarm.text}", err=True)
-    if pages:
-        say(f"wrote {report / 'index.html'}", err=True)
+    say(f"wrote {report / 'index.html'}", err=True)
     say(f"wrote {folder / night.result_set}", err=True)
     if as_json:
-        document = night_as_json(night)
-        if pages:
-            document = json.loads((report / "report.json").read_text("utf-8"))
+        document = json.loads((report / "report.json").read_text("utf-8"))
         say(json.dumps(document, indent=1, allow_nan=False))
 
 

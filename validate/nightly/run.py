@@ -16,7 +16,6 @@ import time
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import replace
 from pathlib import Path
-from typing import Any
 
 from truefall.validate.errors import InputError
 from truefall.validate.nightly.accepting import accept, read_accepted
@@ -241,28 +240,16 @@ def report_folder(out: Path, number: int) -> Path:
     return out / f"report-{number:05d}"
 
 
-def pages_module() -> Any:
-    """What writes the pages; None where it is not there."""
-    import importlib
-
-    try:
-        found = importlib.import_module("truefall.validate.nightly.pages")
-        return found if hasattr(found, "write_pages") else None
-    except ModuleNotFoundError:
-        return None
-
-
 def _pages(night: Night, trends: Trends, out: Path) -> None:
     """Write the pages of a night whole, and a copy under a name that does not change."""
-    pages = pages_module()
-    if pages is None:
-        return
+    from truefall.validate.nightly.pages import write_pages
+
     final, latest = report_folder(out, night.number), out / "latest"
     unfinished = out / f".report-{night.number:05d}.unfinished"
     shutil.rmtree(unfinished, ignore_errors=True)
     unfinished.mkdir()
     keys = [c.key for c in night.cases]
-    pages.write_pages(
+    write_pages(
         night, trends.trends(keys, max(_LEAST_NIGHTS, _MOST_ROWS // max(1, len(keys)))), unfinished
     )
     shutil.rmtree(final, ignore_errors=True)
