@@ -89,64 +89,8 @@ def use():
 """
 
 
-def module_of(folder: Path, text: str, monkeypatch: pytest.MonkeyPatch) -> None:
-    """A module ``sample`` that the child processes can import."""
-    (folder / "sample.py").write_text(text)
-    monkeypatch.setenv("PYTHONPATH", str(folder))
-    monkeypatch.setenv("NUMBA_CACHE_DIR", str(folder))
-    monkeypatch.setattr(sys, "dont_write_bytecode", True)
-
-
-def outcomes(limit: float = 60.0) -> dict[str, str]:
-    held = hold_kernels(["sample"], ["sample:use"], prepare="", limit=limit)
-    return {h.name.removeprefix("sample."): h.outcome for h in held}
-
-
-@pytest.mark.slow
-def test_every_compiled_function_equals_its_interpreted_source(record_property):
-    """All modules imported, every function found, every one with inputs; no stranger."""
-    held = hold_kernels()
-    bad = [f"{h.name}: {h.outcome} {h.distance:g} {h.text}" for h in held if not h.good]
-    close = [h.name for h in held if h.outcome == "close"]
-    print(f"{len(held)} compiled functions, {len(close)} not to the bit: {close}")
-    record_property("kernels", len(held))
-    assert not bad, "\n".join(bad)
-    assert len(held) > 100
-    assert len({h.name for h in held}) == len(held)
-    assert len(close) <= 5
-
-
-def test_the_known_wrong_translation_is_found(tmp_path, monkeypatch):
-    """Wrong value, hang and failing typing, in child processes with a time limit.
-
-    With Numba 0.68.1 under Python 3.11 each of the three loops fails in its way; another version
-    may translate some of them rightly, which is asked of the compiler itself where it returns.
-    """
-    names = ("wrong_value", "hang", "failing_typing", "bounded")
-    text = _HEAD + "".join(f"{n} = njit(error_model='numpy')({n})\n" for n in names)
-    module_of(tmp_path, text + _USE.format(names=", ".join(names)), monkeypatch)
-    found = outcomes(limit=8.0)
-    print(found)
-    assert found["bounded"] == "equal"
-    known = {"wrong_value": "differs", "hang": "stands still", "failing_typing": "refused"}
-    if (numba.__version__, sys.version_info[:2]) == ("0.68.1", (3, 11)):
-        assert {name: found[name] for name in known} == known
-    names_here: dict[str, Any] = {}
-    exec(_HEAD, names_here)
-    v = np.array([0.3, 0.4, 0.5])
-    right = names_here["wrong_value"](v, 0.1, 0.55)
-    compiled = numba.njit(error_model="numpy")(names_here["wrong_value"])(v, 0.1, 0.55)
-    assert (found["wrong_value"] == "equal") == (compiled == right)
-    assert found["hang"] in ("stands still", "equal")
-    assert found["failing_typing"] in ("refused", "equal")
-
-
-def test_failures_put_in_on_purpose_are_found(tmp_path, monkeypatch):
-    """Detection does not hang on the version of the compiler: wrong on purpose when compiled.
-
-    ``overload`` gives compiled code another body than the interpreter runs.
-    """
-    text = """
+#: ``overload`` gives compiled code another body than the interpreter runs.
+_ON_PURPOSE = """
 import numpy as np
 from numba import njit, vectorize
 from numba.extending import overload
@@ -210,7 +154,63 @@ def use():
     cannot_be_typed(1.0)
     right(0.1)
 """
-    module_of(tmp_path, text, monkeypatch)
+
+
+def module_of(folder: Path, text: str, monkeypatch: pytest.MonkeyPatch) -> None:
+    """A module ``sample`` that the child processes can import."""
+    (folder / "sample.py").write_text(text)
+    monkeypatch.setenv("PYTHONPATH", str(folder))
+    monkeypatch.setenv("NUMBA_CACHE_DIR", str(folder))
+    monkeypatch.setattr(sys, "dont_write_bytecode", True)
+
+
+def outcomes(limit: float = 60.0) -> dict[str, str]:
+    held = hold_kernels(["sample"], ["sample:use"], prepare="", limit=limit)
+    return {h.name.removeprefix("sample."): h.outcome for h in held}
+
+
+@pytest.mark.slow
+def test_every_compiled_function_equals_its_interpreted_source(record_property):
+    """All modules imported, every function found, every one with inputs; no stranger."""
+    held = hold_kernels()
+    bad = [f"{h.name}: {h.outcome} {h.distance:g} {h.text}" for h in held if not h.good]
+    close = [h.name for h in held if h.outcome == "close"]
+    print(f"{len(held)} compiled functions, {len(close)} not to the bit: {close}")
+    record_property("kernels", len(held))
+    assert not bad, "\n".join(bad)
+    assert len(held) > 100
+    assert len({h.name for h in held}) == len(held)
+    assert len(close) <= 5
+
+
+def test_the_known_wrong_translation_is_found(tmp_path, monkeypatch):
+    """Wrong value, hang and failing typing, in child processes with a time limit.
+
+    With Numba 0.68.1 under Python 3.11 each of the three loops fails in its way; another version
+    may translate some of them rightly, which is asked of the compiler itself where it returns.
+    """
+    names = ("wrong_value", "hang", "failing_typing", "bounded")
+    text = _HEAD + "".join(f"{n} = njit(error_model='numpy')({n})\n" for n in names)
+    module_of(tmp_path, text + _USE.format(names=", ".join(names)), monkeypatch)
+    found = outcomes(limit=8.0)
+    print(found)
+    assert found["bounded"] == "equal"
+    known = {"wrong_value": "differs", "hang": "stands still", "failing_typing": "refused"}
+    if (numba.__version__, sys.version_info[:2]) == ("0.68.1", (3, 11)):
+        assert {name: found[name] for name in known} == known
+    names_here: dict[str, Any] = {}
+    exec(_HEAD, names_here)
+    v = np.array([0.3, 0.4, 0.5])
+    right = names_here["wrong_value"](v, 0.1, 0.55)
+    compiled = numba.njit(error_model="numpy")(names_here["wrong_value"])(v, 0.1, 0.55)
+    assert (found["wrong_value"] == "equal") == (compiled == right)
+    assert found["hang"] in ("stands still", "equal")
+    assert found["failing_typing"] in ("refused", "equal")
+
+
+def test_failures_put_in_on_purpose_are_found(tmp_path, monkeypatch):
+    """Detection does not hang on the version of the compiler: wrong on purpose when compiled."""
+    module_of(tmp_path, _ON_PURPOSE, monkeypatch)
     assert outcomes(limit=10.0) == {
         "one_bit_off": "differs",
         "writes_wrongly": "differs",

@@ -60,6 +60,9 @@ def text(found: Sequence[Measure], quick: bool) -> str:
         )  # fmt: skip
         if group == "judge":
             figure = "as due" if good == len(mine) else "not as due"
+        elif group == "kernels":
+            equal = sum(m.good and m.value == 0.0 for m in mine)
+            figure = f"{equal} to the bit, {good - equal} within what is allowed"
         lines.append(f"  {group:<10} {good:>4} of {len(mine):<4} {figure:<44} {heading}")
     if quick:
         lines.append("  kernels       left out (--quick)")
