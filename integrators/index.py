@@ -147,6 +147,7 @@ METHODS: Mapping[str, Method] = {
         Method(
             "gauss-radau-15", 15, "adaptive", True, False,
             "Everhart 1985; Rein & Spiegel 2015, MNRAS 446, 1424", _gauss_radau,
+            arithmetics=("float64", "compensated", "double-double"),
         ),
         *(_gauss(order) for order in range(2, 17, 2)),
         *symplectic_methods(),

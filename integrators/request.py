@@ -156,6 +156,8 @@ def check_request(
         raise ValueError(f"{how.name} chooses its steps; give a tolerance instead of a step")
     if step is not None and tolerance is not None and how.adaptive:
         raise ValueError("give a step or a tolerance, not both")
+    if arithmetic == "double-double" and step is None and how.order is not None:
+        raise ValueError(f"{how.name} runs in double-double at a fixed step; give a step")
     if tolerance is not None and not how.adaptive:
         raise ValueError(f"{how.name} has a fixed step; give a step and no tolerance")
     found = _order(how, order, arithmetic)

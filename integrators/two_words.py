@@ -1,4 +1,4 @@
-"""Runs in double-double: about 32 digits, with Taylor series or Gauss-Legendre collocation.
+"""Runs in double-double: about 32 digits, with Taylor series or collocation.
 
 A step takes a thousand times as long as the call that starts it, so this loop is plain Python
 around compiled steps.  As in loop.py, time stamps are met by Newton's method on the step's own
@@ -14,6 +14,7 @@ from typing import Protocol
 import numpy as np
 import numpy.typing as npt
 
+from truefall.integrators.adaptive.gauss_radau import radau_tableau
 from truefall.integrators.adaptive.taylor import decay, natural_unit, power_of_two
 from truefall.integrators.arithmetic import add
 from truefall.integrators.equations.rates import areal_radius, rate, scales
@@ -89,17 +90,17 @@ class _Taylor:
         return True
 
 
-class _GaussLegendre:
-    """Collocation of one step, again for every part of it that is asked for."""
+class _Collocation:
+    """Gauss-Legendre or Gauss-Radau: one step, again for every part of it that is asked for."""
 
     def __init__(self, request: Request, par: Floats, par_low: Floats) -> None:
         found = request.equations
-        stages = request.order // 2
+        stages = (request.order + 1) // 2
         self._tape = rate_tape(found.kind, request.variable, found.size)
         self._par, self._par_low = par, par_low
         with localcontext() as context:
             context.prec = DIGITS
-            _, b, a = gauss_legendre_tableau(stages)
+            _, b, a = gauss_legendre_tableau(stages) if request.order % 2 == 0 else radau_tableau()
             rows: list[list[Decimal]] = [*a, b]
             words = [two_words(row) for row in rows]
         self._table = np.array([w[0] for w in words]), np.array([w[1] for w in words])
@@ -152,7 +153,7 @@ def run_in_two_words(
     states, states_low, pars, pars_low = begin(found, x, v, request.light)
     y, low, par, par_low = states[0].copy(), states_low[0].copy(), pars[0], pars_low[0]
     y[found.time_row] = stamps[0]
-    method = _Taylor if request.method.order is None else _GaussLegendre
+    method = _Taylor if request.method.order is None else _Collocation
     step: _Step = method(request, par, par_low)
     rows, rows_low = np.full((2, stamps.size, found.size), np.nan)
     rows[0], rows_low[0] = y, low

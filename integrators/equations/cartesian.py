@@ -30,7 +30,6 @@ _isotropic = isotropic.radial
 _harmonic = harmonic.radial
 _kerr_schild = kerr_schild.radial
 _painleve_gullstrand = painleve_gullstrand.radial
-_eddington_finkelstein = eddington_finkelstein.radial
 
 #: Kind to the metric of its chart.
 METRICS: dict[int, Callable[..., tuple[Any, Any, Any, Any]]] = {
@@ -45,18 +44,16 @@ METRICS: dict[int, Callable[..., tuple[Any, Any, Any, Any]]] = {
 
 @kernel
 def _radial(kind: int, size: float) -> Radial:
-    """The eight radial numbers of a chart."""
+    """The eight radial numbers of a chart; kind 7 as eddington_finkelstein.py says."""
     if kind == 2:
         return _areal(size)
     if kind == 3:
         return _isotropic(size)
     if kind == 4:
         return _harmonic(size)
-    if kind == 5:
-        return _kerr_schild(size)
     if kind == 6:
         return _painleve_gullstrand(size)
-    return _eddington_finkelstein(size)
+    return _kerr_schild(size)
 
 
 @kernel
@@ -84,5 +81,7 @@ def cartesian_rate(kind: int, energy: float, y: Floats, out: Floats) -> float:
     out[0], out[1], out[2] = c * p0 + g * x0, c * p1 + g * x1, c * p2 + g * x2
     out[3], out[4], out[5] = q * x0 - g * p0, q * x1 - g * p1, q * x2 - g * p2
     out[6] = a * energy + b * pn
+    if kind == 7:
+        out[6] += (x0 * out[0] + x1 * out[1] + x2 * out[2]) / size
     out[7] = 1.0
     return size

@@ -1,19 +1,16 @@
-"""Eddington-Finkelstein coordinates, ingoing, with the null time v."""
+"""Eddington-Finkelstein coordinates, ingoing, with the null time v = T + R, T Kerr-Schild's.
+
+The momentum that belongs to v has E in its radial part, beside which the orbit's own part is small
+and would lose digits, in weak fields nearly all of them.  With that E taken off (a canonical
+transformation) the equations are those of Kerr-Schild, and only the time runs differently:
+dv = dT + dR.
+"""
 
 from __future__ import annotations
 
-from truefall.integrators.compiled import kernel
-from truefall.integrators.equations.types import Radial
 from truefall.integrators.tape import Row
 
-__all__ = ["metric", "radial"]
-
-
-@kernel
-def radial(size: float) -> Radial:
-    """The inverse metric at a radius: a, a', b, b', c, c', d, d'."""
-    v = 1.0 / size
-    return 0.0, 0.0, 1.0, 0.0, 1.0, 0.0, -2.0 * v, 2.0 * v * v
+__all__ = ["metric"]
 
 
 def metric(size: Row) -> tuple[Row | float, Row | float, Row | float, Row | float]:

@@ -94,9 +94,11 @@ def _motion(metric: Any, x: Any, v: Any, light: bool, outward: bool) -> tuple[An
 
 def _momenta(kind: int, x: Any, motion: tuple[Any, ...]) -> list[Any]:
     """x and p, or the spherical coordinates and their momenta."""
-    size, n, v, along, pace, _, (b, c, g) = motion
+    size, n, v, along, pace, energy, (b, c, g) = motion
     pull = (g - c) * along + b
     p = [pace * (c * v[i] + pull * n[i]) for i in range(3)]
+    if kind == 7:
+        p = [p[i] - energy * n[i] for i in range(3)]
     if kind != 8:
         return [*x, *p]
     flat = root(x[0] * x[0] + x[1] * x[1])
