@@ -183,7 +183,7 @@ def _run(
     rows[0] = y
     work = [np.zeros(parts.memory) for _ in range(3)]
     count = first_numbers(1)[0]
-    real, places = real_numbers(request), first_places(x[0], v[0])
+    real, places = real_numbers(request), first_places(x[0], v[0], len(codes) > 0)
     hits = np.zeros((_HITS + 2 * len(codes), 3), dtype=np.int64)
     hit_states = np.zeros((hits.shape[0], found.size + 1))
     seen: list[tuple[int, bool, Floats]] = []
@@ -229,12 +229,13 @@ def first_numbers(many: int) -> npt.NDArray[np.int64]:
     return count
 
 
-def first_places(x: Floats, v: Floats) -> Floats:
-    """The orbit's normal, two places to be filled, and the azimuth so far."""
+def first_places(x: Floats, v: Floats, watched: bool) -> Floats:
+    """The orbit's normal, two places to be filled, and the azimuth so far (for events only)."""
     places = np.zeros((4, 3))
-    normal = np.cross(x, v)
-    size = float(np.sqrt(normal @ normal))
-    places[0] = normal / size if size > 0.0 else 0.0
+    if watched:
+        normal = np.cross(x, v)
+        size = float(np.sqrt(normal @ normal))
+        places[0] = normal / size if size > 0.0 else 0.0
     return places
 
 

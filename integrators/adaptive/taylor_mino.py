@@ -5,10 +5,12 @@ The same series as the tape of ``equations/mino.py`` would give, from these rela
     w' = mu + L^2 (3 u^2 - u),   r u = 1,   q (1 - 2 u) = 1,
     lambda' = r^2,   T' = E r^2 q = E (r^2 + 2 r + 4 q)
 
-and the rotation n' = m, m' = -L^2 n as two series for all components.
+The rotation n' = m, m' = -L^2 n has its cosine and sine for a series.
 """
 
 from __future__ import annotations
+
+from math import sin, sqrt
 
 import numpy as np
 import numpy.typing as npt
@@ -24,8 +26,8 @@ __all__ = ["parts", "taylor_mino_inside", "taylor_mino_step"]
 
 Integers = npt.NDArray[np.int64]
 
-# Rows of the memory: u, w, T, lambda, cosine and sine of the rotation, r, q, units.
-_ROWS = 9
+# Rows of the memory: u, w, T, lambda, r, q, units.
+_ROWS = 7
 
 
 @kernel
@@ -35,7 +37,7 @@ def mino_orbit(par: Floats, s: Floats, order: int, unit: float) -> None:
     Products by symmetry, pair by pair, all in one loop, in which a step spends its time.
     """
     energy, mu, square = par[0], par[1], par[2]
-    u, w, time, clock, r, q = s[0], s[1], s[2], s[3], s[6], s[7]
+    u, w, time, clock, r, q = s[0], s[1], s[2], s[3], s[4], s[5]
     r[0], q[0] = 1.0 / u[0], 1.0 / (1.0 - 2.0 * u[0])
     for k in range(order):
         uu, rr, ur, uq = 0.0, 0.0, 0.0, 0.0
@@ -69,15 +71,6 @@ def mino_orbit(par: Floats, s: Floats, order: int, unit: float) -> None:
 
 
 @kernel
-def rotation(square: float, s: Floats, order: int, unit: float) -> None:
-    """Series of cos(L s) - 1 and sin(L s)/L in rows 4 and 5."""
-    s[4, 0], s[5, 0] = 1.0, 0.0
-    for k in range(order):
-        s[5, k + 1] = unit * s[4, k] / (k + 1.0)
-        s[4, k + 1] = -unit * square * s[5, k] / (k + 1.0)
-
-
-@kernel
 def _unrolled(square: float, e: float, f: float) -> float:
     """What (1 + e)^2 + L^2 f^2 = 1 asks to be added to e, the cosine less one, as a second word.
 
@@ -94,17 +87,21 @@ def _unrolled(square: float, e: float, f: float) -> float:
 
 
 @kernel
-def _change(s: Floats, y: Floats, square: float, order: int, theta: float, out: Floats) -> None:
-    """The change of the whole state (10,) at a point of the step."""
-    a, b, c, d, e, f = 0.0, 0.0, 0.0, 0.0, 0.0, 0.0
+def _change(
+    s: Floats, y: Floats, par: Floats, order: int, part: float, theta: float, out: Floats
+) -> None:  # fmt: skip
+    """The change of the whole state (10,) at ``theta`` into the step, ``part`` of the unit."""
+    a, b, c, d = 0.0, 0.0, 0.0, 0.0
     for k in range(order, 0, -1):
-        a = (a + s[0, k]) * theta
-        b = (b + s[1, k]) * theta
-        c = (c + s[2, k]) * theta
-        d = (d + s[3, k]) * theta
-        e = (e + s[4, k]) * theta
-        f = (f + s[5, k]) * theta
+        a = (a + s[0, k]) * part
+        b = (b + s[1, k]) * part
+        c = (c + s[2, k]) * part
+        d = (d + s[3, k]) * part
     out[0], out[1], out[8], out[9] = a, b, c, d
+    square, spin = par[2], sqrt(par[2])
+    half = sin(0.5 * spin * theta)
+    e = -2.0 * half * half
+    f = sin(spin * theta) / spin if spin > 0.0 else theta
     low = _unrolled(square, e, f)
     for i in range(3):
         out[2 + i] = e * y[2 + i] + f * y[5 + i] + low * y[2 + i]
@@ -127,16 +124,15 @@ def taylor_mino_step(
     units[0] = units[1]
     memory[0, 0], memory[1, 0], memory[2, 0], memory[3, 0] = y[0], y[1], y[8], y[9]
     mino_orbit(par, memory, order, units[0])
-    rotation(par[2], memory, order, units[0])
     if table[0, 0] == 1.0:
         scales(kind, par, y, change)
-        change[2], change[3], change[4], change[5] = change[8], change[9], 1.0, 1.0
-        own = units[0] * decay(memory, change, 6, order, tolerance)
+        change[2], change[3] = change[8], change[9]
+        own = units[0] * decay(memory, change, 4, order, tolerance)
         if own < abs(h):
             h = own if h > 0.0 else -own
     if h != 0.0 and np.isfinite(h):
         units[1] = power_of_two(abs(h))
-    _change(memory, y, par[2], order, h / units[0], change)
+    _change(memory, y, par, order, h / units[0], h, change)
     return 0.0, 1, h
 
 
@@ -146,7 +142,7 @@ def taylor_mino_inside(
     y: Floats, theta: float, before: Floats, memory: Floats, scratch: Floats, change: Floats,
 ) -> int:  # fmt: skip
     """The change at a point of the step from the series just made."""
-    _change(memory, y, par[2], memory.shape[1] - 1, theta / memory[-1, 0], change)
+    _change(memory, y, par, memory.shape[1] - 1, theta / memory[-1, 0], theta, change)
     return 0
 
 

@@ -131,7 +131,7 @@ def test_the_fast_series_in_mino_time_is_the_tapes():
     slow = np.zeros((tape.rows, 31))
     slow[: found.size, 0] = y
     taylor(tape.integrating(), tape.literals, par, slow, 30, 0.5)
-    fast = np.zeros((9, 31))
+    fast = np.zeros((6, 31))
     fast[:4, 0] = y[[0, 1, 8, 9]]
     mino_orbit(par, fast, 30, 0.5)
     scale = np.abs(slow[[0, 1, 8, 9], :]).max(axis=1, keepdims=True) * 0.9 ** np.arange(31)
