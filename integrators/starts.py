@@ -10,6 +10,7 @@ import numpy.typing as npt
 from truefall.integrators.equations.tapes import result_tape, start_tape
 from truefall.integrators.index import Equations
 from truefall.integrators.series import evaluate, evaluate_in_two_words, evaluate_many
+from truefall.integrators.tape import Tape
 
 __all__ = ["begin", "finish", "finish_in_two_words", "finish_many"]
 
@@ -42,26 +43,28 @@ def begin(
         For a start that no particle or ray can have, with its row.
     """
     given = np.concatenate([positions, velocities], axis=1)
-    out = np.full((len(given), equations.size + 3), np.nan)
-    low = np.zeros_like(out)
-    out_of = (positions * velocities).sum(axis=1) > 0.0
-    for outward in (False, True):
-        rows = out_of == outward
-        if rows.any():
-            tape = start_tape(equations.kind, light, outward)
-            part, part_low = (
-                np.empty((rows.sum(), out.shape[1])),
-                np.empty((rows.sum(), out.shape[1])),
-            )
-            none = np.zeros(3)
-            evaluate_in_two_words(
-                tape.lines, tape.literals, tape.results, none, none, given[rows],
-                np.zeros_like(given[rows]), part, part_low,
-            )  # fmt: skip
+    out = np.empty((len(given), equations.size + 3))
+    low = np.empty_like(out)
+    if not light:
+        _evaluate(start_tape(equations.kind, False, False), given, out, low)
+    else:
+        out_of = (positions * velocities).sum(axis=1) > 0.0
+        for outward in (False, True):
+            rows = out_of == outward
+            part, part_low = out[rows], low[rows]
+            _evaluate(start_tape(equations.kind, True, outward), given[rows], part, part_low)
             out[rows], low[rows] = part, part_low
     _refuse(equations, positions, out, first)
     n = equations.size
     return out[:, :n], low[:, :n], out[:, n:].copy(), low[:, n:].copy()
+
+
+def _evaluate(tape: Tape, given: Floats, out: Floats, low: Floats) -> None:
+    """Fill ``out`` and ``low`` from starts (m, 6); no parameters."""
+    none = np.zeros(3)
+    evaluate_in_two_words(
+        tape.lines, tape.literals, tape.results, none, none, given, np.zeros_like(given), out, low
+    )
 
 
 def _refuse(equations: Equations, positions: Floats, out: Floats, first: int) -> None:
@@ -70,13 +73,15 @@ def _refuse(equations: Equations, positions: Floats, out: Floats, first: int) ->
         return
     rest = {3: 0.5, 4: 1.0}.get(equations.kind, 2.0 if equations.static else 0.0)
     size = np.sqrt((positions * positions).sum(axis=1))
+    energy = out[:, equations.size]
+    sound = np.isfinite(out.sum(axis=1)) & (energy > (0.0 if equations.static else -np.inf))
+    if sound.all() and size.min(initial=np.inf) > rest:
+        return
     for row in np.flatnonzero(~(size > rest))[:1]:
         raise ValueError(
             f"start {first + row}: the {equations.chart} chart holds radii above {rest:g}, and the "
             f"position has {size[row]:g}"
         )
-    energy = out[:, equations.size]
-    sound = np.isfinite(out).all(axis=1) & (energy > (0.0 if equations.static else -np.inf))
     for row in np.flatnonzero(~sound)[:1]:
         words = (
             "lies on the polar axis, where the spherical coordinates end"
