@@ -52,7 +52,8 @@ def character(search: Search, method: Candidate | None, after: Floats | None) ->
             "the residual is what rounding in double precision adds up to",
             "nothing, unless this accuracy must be beaten: then the step's arithmetic",
         )  # fmt: skip
-    if random and 1e-2 < misfit / _SINGLE**2 <= _ROUNDING:
+    few = method is None or method.explains < 0.9
+    if random and few and 0.1 < misfit / _SINGLE**2 <= _ROUNDING:
         return _rounding(
             before, misfit / _SINGLE**2, "single-precision-state",
             "the residual wanders as rounding to single precision (24 bits) makes it",

@@ -24,11 +24,11 @@ _LIKELY = 14
 #: Difference of scores that decides (Kass and Raftery 1995 call 10 very strong; from memory).
 MARGIN = 12.0
 #: Misfit (mean square over the floor's) that is compatible with the floor, and the share of the
-#: squared residual that a mistake must remove then.
+#: squared residual that a mistake must remove then if the floor is the file's digits.
 COMPATIBLE, _MOST = 9.0, 0.9
 #: Misfit up to which a good program's rounding may reach, and the shares there, for mistakes of
-#: few numbers and of many: rounding wanders, and six numbers follow a wanderer.
-_ROUNDED, _NEARLY_ALL, _NEARLY_ALL_OF_MANY, _FEW = 3e4, 0.985, 0.998, 3
+#: one number and of more: rounding wanders, and the more numbers the better they follow it.
+_ROUNDED, _NEARLY_ALL, _NEARLY_ALL_OF_MANY = 3e4, 0.998, 0.9995
 #: The share that is overwhelming whatever remains.
 _OVERWHELMING = 0.9999
 #: A method's errors that leave so many times less than a mistake are believed in its place.
@@ -44,6 +44,8 @@ _FIRST = 0.3
 #: A method's errors beside a mistake are told if they are this share of the squared residual.
 _VISIBLE = 1e-6
 _INDEPENDENT = 200
+#: Likeness of neighbours in a remainder from which on it wanders.
+_WANDERS = 0.5
 
 
 @dataclass(frozen=True)
@@ -55,6 +57,7 @@ class Candidate:
     explains: float
     misfit: float
     independent: int
+    coarse: bool = False
     twins: tuple[str, ...] = ()
 
     @property
@@ -82,7 +85,7 @@ def score(problem: Problem, found: Fit) -> Candidate:
     misfit = found.cost / problem.count
     explains = 1.0 - found.cost / problem.cost if problem.cost > 0 else 0.0
     independent = min(problem.count, _INDEPENDENT)
-    bare = Candidate(found, 0.0, explains, misfit, independent)
+    bare = Candidate(found, 0.0, explains, misfit, independent, problem.scene.coarse)
     return replace(bare, score=_value(max(misfit, 1.0), bare))
 
 
@@ -167,10 +170,10 @@ def earned(candidate: Candidate, before: Candidate, method: Candidate | None) ->
     soft = method is not None and any(f.soft for f in candidate.fit.faults)
     if soft and not (better(candidate, method) and share >= _OVERWHELMING):  # type: ignore[arg-type]
         return False
-    if candidate.misfit <= COMPATIBLE:
+    if candidate.misfit <= COMPATIBLE and candidate.coarse:
         return share >= _MOST
     if candidate.misfit <= _ROUNDED:
-        many = candidate.fit.numbers.size - before.fit.numbers.size > _FEW
+        many = candidate.fit.numbers.size - before.fit.numbers.size > 1
         return share >= (_NEARLY_ALL_OF_MANY if many else _NEARLY_ALL)
     vetoed = method is not None and method.fit.cost * _VETO < candidate.fit.cost
     return share >= _OVERWHELMING and not (vetoed and better(method, candidate))  # type: ignore[arg-type]
@@ -306,5 +309,8 @@ def spread_of(problem: Problem, found: Fit) -> list[Floats]:
     power = float(np.sum(left * left))
     alike = 0.0 if power == 0 else float(np.sum(left[1:] * left[:-1])) / power
     alike = min(max(alike, 0.0), 0.99)
-    widened = scatter * (1 + alike) / (1 - alike)
+    longer = (1 + alike) / (1 - alike)
+    if alike > _WANDERS or scatter > COMPATIBLE:  # what wanders says little more than its turns
+        longer = max(longer, problem.rows.size / 4)
+    widened = scatter * longer
     return [np.sqrt(variance * widened) for _, variance in numbers_of(found)]

@@ -90,6 +90,14 @@ class Scene:
         return float(scale / (1.0 + float(self.revolutions.max())))
 
     @cached_property
+    def coarse(self) -> bool:
+        """Whether the file's digits, not arithmetic, are the floor of its positions."""
+        comparison = self.result.comparison
+        assert comparison is not None
+        digits = float(np.median(comparison.position_guard.quantisation)) / self.length
+        return digits / 3 > 0.5 * float(np.median(self.floor[0]))
+
+    @cached_property
     def base(self) -> Sample:
         """The faultless flight, by the same arithmetic as the faulty ones."""
         return fly(self.law, self.start[:3], self.start[3:], self.elapsed)

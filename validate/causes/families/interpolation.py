@@ -108,13 +108,19 @@ def _rhythm(scene: Scene, size: Floats) -> list[tuple[float, ...]]:
         peak_at = peak + 0.5 * (left - right) / (left - 2 * mid + right)
     else:
         peak_at = float(peak)
-    rough = abs(float(t[-1] - t[0])) * t.size / (t.size - 1) / peak_at
+    spacing = abs(float(t[-1] - t[0])) / (t.size - 1)
+    seen = peak_at / t.size  # in cycles a row; shorter steps show an alias of theirs
+    return [_tuned(t, level, spacing / f) for f in (seen, 1 - seen, 1 + seen)]
+
+
+def _tuned(t: Floats, level: Floats, rough: float) -> tuple[float, ...]:
+    """The step near a rough one whose bumps follow the residual best."""
     trials = rough * np.linspace(0.95, 1.05, 801)
     share = np.mod(t[None, :] / trials[:, None], 1.0)
     bump = share * (1 - share)
     bump -= bump.mean(axis=1, keepdims=True)
     likeness = bump @ (level - level.mean()) / np.linalg.norm(bump, axis=1)
-    return [(float(trials[int(np.argmax(likeness))]),)]
+    return (float(trials[int(np.argmax(likeness))]),)
 
 
 def _wanted(scene: Scene) -> bool:

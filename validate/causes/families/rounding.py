@@ -129,6 +129,7 @@ def _stamps_in_single(plan: Plan, scene: Scene, added_up: bool) -> Plan:
     assert trajectory is not None
     assert spec is not None
     time = trajectory.time
+    cut: Floats
     if added_up:
         total, step = np.float32(time[0]), np.float32(time[1] - time[0])
         if not np.allclose(np.diff(time), time[1] - time[0], rtol=1e-6):
@@ -136,7 +137,7 @@ def _stamps_in_single(plan: Plan, scene: Scene, added_up: bool) -> Plan:
         cut = np.empty(time.size)
         for k in range(time.size):
             cut[k] = float(total)
-            total = np.float32(total + step)
+            total += step
     else:
         cut = np.float32(time).astype(np.float64)
     return replace(plan, stamps=plan.stamps + (cut - time) / scene.time)
@@ -148,6 +149,20 @@ def is_rounded(scene: Scene) -> bool:
 
 
 _LOOK = "the format of the output and the types of its variables"
+
+
+def _stamps(added_up: bool) -> Fault:
+    return Fault(
+        "single-precision-time-stamps",
+        "numerics",
+        label="added up" if added_up else "each",
+        look_at=_LOOK,
+        choices=1,
+        apply=lambda plan, scene, _: _stamps_in_single(plan, scene, added_up),
+        say=lambda _: "the program's time is kept in single precision (24 bits)",
+    )
+
+
 register(
     Fault("output-rounded", "numerics", label="decimals", look_at=_LOOK, choices=1,
           apply=lambda plan, scene, _: _fixed(plan, scene), say=_say_fixed),
@@ -157,12 +172,6 @@ register(
           wanted=is_single,
           apply=lambda plan, scene, _: _single(plan, scene),
           say=lambda _: "states are written in single precision (24 bits)"),
-    *(
-        Fault("single-precision-time-stamps", "numerics", label=label, look_at=_LOOK,
-              apply=apply, say=lambda _: "the program's time is kept in single precision (24 bits)")
-        for label, apply in (
-            ("each", lambda plan, scene, _: _stamps_in_single(plan, scene, False)),
-            ("added up", lambda plan, scene, _: _stamps_in_single(plan, scene, True)),
-        )
-    ),
+    _stamps(False),
+    _stamps(True),
 )  # fmt: skip
