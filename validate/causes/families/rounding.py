@@ -131,15 +131,16 @@ def _stamps_in_single(plan: Plan, scene: Scene, added_up: bool) -> Plan:
     time = trajectory.time
     cut: Floats
     if added_up:
-        total, step = np.float32(time[0]), np.float32(time[1] - time[0])
+        total = np.float32(time[0])
+        step = np.float32(time[1] - time[0])
         if not np.allclose(np.diff(time), time[1] - time[0], rtol=1e-6):
             raise ValueError("the time stamps are not even")
         cut = np.empty(time.size)
         for k in range(time.size):
             cut[k] = float(total)
-            total += step
+            total = np.float32(total + step)
     else:
-        cut = np.float32(time).astype(np.float64)
+        cut = time.astype(np.float32).astype(np.float64)
     return replace(plan, stamps=plan.stamps + (cut - time) / scene.time)
 
 
