@@ -161,7 +161,8 @@ def test_layout(tmp_path: Path) -> None:
             "time": b"s", "component": b"1", "proper_time": b"s", "proper_time_low": b"s",
             "proper_time_bound": b"s", "position": b"m", "position_low": b"m",
             "position_bound": b"m", "velocity": b"m/s", "velocity_low": b"m/s",
-            "velocity_bound": b"m/s",
+            "velocity_bound": b"m/s", "azimuth": b"rad", "azimuth_low": b"rad",
+            "azimuth_bound": b"rad",
         }  # fmt: skip
         for name in units:
             dataset = group[name]
