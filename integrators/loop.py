@@ -148,6 +148,7 @@ def _advance(
         grow = 0.9 * error ** (-real[2]) if error > 0.0 else 5.0
         real[0] = taken * min(5.0, max(0.2, grow))
     real[4] = max(abs(taken), 0.5 * real[4])
+    real[5] = max(abs(taken), real[5])
 
 
 def _serve(
@@ -185,8 +186,8 @@ def _loop(
 
     ``numbers``: kind, variable, row of the chart's time, whether sums are compensated, whether
     the chart is static, whether steps adapt.  ``real``: next step, tolerance, exponent of the
-    step control, direction, recent size of steps.  ``count``: steps, rejected, evaluations, next
-    time stamp, hits.
+    step control, direction, recent and largest size of steps.  ``count``: steps, rejected,
+    evaluations, next time stamp, hits.
     """
     kind, variable, at, events = numbers[0], numbers[1], numbers[2], watched.shape[0]
     change, out, moved = np.zeros(y.size), np.zeros(y.size), np.zeros(y.size)
@@ -213,6 +214,8 @@ def _loop(
             if not _smaller(real, error, taken, sound):
                 return 4 if _at_edge(kind, numbers[4], y) else 3
             continue
+        if abs(taken) < 1e-15 * real[5]:
+            return 4 if _at_edge(kind, numbers[4], y) else 3
         last, ends = taken, y[at] + (change[at] + carry[at])
         if events > 0:
             moved[:] = change

@@ -219,7 +219,7 @@ def real_numbers(request: Request) -> Floats:
     """The loop's real numbers; see loop.py."""
     first = request.step if request.step is not None else 1e300 if request.parts.chooses else 0.0
     ahead = request.direction
-    return np.array([first * ahead, request.tolerance, request.parts.exponent, ahead, 0.0])
+    return np.array([first * ahead, request.tolerance, request.parts.exponent, ahead, 0.0, 0.0])
 
 
 def first_numbers(many: int) -> npt.NDArray[np.int64]:

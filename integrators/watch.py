@@ -159,8 +159,10 @@ def _notice(
             change, out, moved, places, (g0, g1),
         )  # fmt: skip
         count[2] += work
-        turn = 1.0 if g0 * h > 0.0 else -1.0
         radii[1] = areal_radius(kind, moved)
+        # A radius that only rounding moves (a circle, an edge approached for ever) does not turn.
+        if max(abs(radii[1] - radii[0]), abs(radii[2] - radii[1])) > 1e-13 * radii[1]:
+            turn = 1.0 if g0 * h > 0.0 else -1.0
     for e in range(watched.shape[0]):
         for piece in range(2):
             happens, value, fa, fb = _bracket(
