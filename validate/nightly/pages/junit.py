@@ -111,10 +111,9 @@ def junit_xml(night: Night) -> str:
             timestamp=night.started.rstrip("Z").split("+")[0],
             time=f"{sum(float(e.get('time', '0')) for e in elements):.3f}",
             tests=str(len(elements)),
-            **{f"{tag}s" if tag != "skipped" else tag:
-               str(sum(e.find(tag) is not None for e in elements))
-               for tag in ("failure", "error", "skipped")},
         )  # fmt: skip
+        for tag, total in (("failure", "failures"), ("error", "errors"), ("skipped", "skipped")):
+            suite.set(total, str(sum(e.find(tag) is not None for e in elements)))
         suite.extend(elements)
     ET.indent(root)
     return '<?xml version="1.0" encoding="UTF-8"?>\n' + ET.tostring(root, encoding="unicode") + "\n"
