@@ -129,10 +129,12 @@ def _step(scene: Scene, method: Candidate, before: Floats, after: Floats) -> Fin
         swing = float(np.std(values - np.polyval(trend, time))) if good.sum() > 4 else 0.0
         per = drift / float(np.ptp(scene.revolutions[scene.usable]) or 1.0)
         parameters["energy drift per revolution"] = Value(per, None, "1")
-        if abs(drift) > 3 * swing:
-            text += f": energy {'is lost' if per < 0 else 'grows'} by {abs(per):.2g} a revolution"
+        if abs(drift) > 0.2 * swing:
+            way = "is lost" if per < 0 else "grows"
+            mean = "" if abs(drift) > 3 * swing else "swings, and in the mean "
+            text += f": energy {mean}{way} by {abs(per):.2g} a revolution"
         else:
-            text += ": energy swings and does not drift"
+            text += ": energy swings and does not visibly drift"
     return Finding(
         "step-too-large", "numerics", method.explains, parameters, text,
         "the step or the tolerance of the integrator: halve it and compare", before, after,

@@ -71,7 +71,8 @@ class Candidate:
 
 def rows_of(scene: Scene, most: int = _SCREEN) -> Rows:
     """Rows to screen by: spread evenly over those that may be explained."""
-    usable = np.flatnonzero(scene.usable)
+    # rows that even the faultless flight does not reach, near a horizon or too far out, stay out
+    usable = np.flatnonzero(scene.usable & np.isfinite(scene.base.position).all(axis=1))
     if usable.size <= most:
         return usable
     return np.asarray(usable[np.unique(np.linspace(0, usable.size - 1, most).astype(int))])

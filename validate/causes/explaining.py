@@ -47,6 +47,8 @@ def _explanation(result: CheckResult, progress: Callable[[str], None] | None) ->
     if scene.usable.sum() < 6:
         return Explanation(description="there are too few rows to tell causes apart")
     search = Search(scene, progress)
+    if search.problem.rows.size < 6:
+        return Explanation(description=describe(scene), unexplained=True)
     if search.nothing.misfit <= 1.0:
         return Explanation(description="the residual is within what digits and rounding leave open")
     chosen, alike = choose(search)

@@ -18,9 +18,9 @@ CHART_CODES = {
     "areal": 0, "isotropic": 1, "harmonic": 2, "kerr-schild": 3, "painleve-gullstrand": 4,
     "eddington-finkelstein": 5,
 }  # fmt: skip
-_INNER = {0: 2.0 + 1e-9, 1: 0.5 + 1e-9, 2: 1.0 + 1e-9, 3: 1e-3, 4: 1e-3, 5: 1e-3}
+_INNER = {0: 2.0 + 1e-4, 1: 0.5 + 1e-4, 2: 1.0 + 1e-4, 3: 1e-3, 4: 1e-3, 5: 1e-3}
 _TOLERANCE = 3e-15
-MOST_STEPS = 200_000
+MOST_STEPS = 20_000
 
 
 @dataclass(frozen=True)

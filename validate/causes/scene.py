@@ -106,7 +106,7 @@ class Scene:
     def patience(self) -> int:
         """Steps after which a flight is given up: many times what the faultless one takes."""
         used = steps_of(self.law, self.start[:3], self.start[3:], self.elapsed)
-        return min(10 * used + 2000, MOST_STEPS)
+        return min(3 * used + 1000, MOST_STEPS)
 
     @cached_property
     def transition(self) -> Floats:
