@@ -11,6 +11,7 @@ from __future__ import annotations
 import os
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
+from functools import lru_cache
 from itertools import pairwise
 from typing import TYPE_CHECKING
 
@@ -105,11 +106,12 @@ class Table:
             self.fill(stamps, position, velocity, clock)
             return position, velocity, clock
         cuts = np.linspace(0, stamps.size, cores + 1).astype(int)
-        with ThreadPoolExecutor(cores) as pool:
-            parts = [slice(a, b) for a, b in pairwise(cuts)]
-            jobs = [
-                pool.submit(self.fill, stamps[p], position[p], velocity[p], clock[p]) for p in parts
-            ]
+        first, *others = [slice(a, b) for a, b in pairwise(cuts)]
+        pool = _workers(cores - 1)
+        jobs = [
+            pool.submit(self.fill, stamps[p], position[p], velocity[p], clock[p]) for p in others
+        ]
+        self.fill(stamps[first], position[first], velocity[first], clock[first])
         for job in jobs:
             job.result()
         return position, velocity, clock
@@ -130,6 +132,12 @@ class Table:
             self.period, self.turn, self.frame, self.frame_low, circle_points(_ANGLES),
             position, velocity, clock,
         )  # fmt: skip
+
+
+@lru_cache(maxsize=1)
+def _workers(count: int) -> ThreadPoolExecutor:
+    """Threads beside the calling one, started once."""
+    return ThreadPoolExecutor(count, thread_name_prefix="truefall-table")
 
 
 class _Fitter:
