@@ -22,70 +22,78 @@ DECIMALS, DIGITS = 400, 40
 #: entries of 16 and 17 significant digits, longest entry in significant digits.
 FLAGS = ("padded", "scientific", "other", "long", "longest")
 _LONG = 16
+# The two functions below are written into their caller: a call with several arrays costs more
+# than what they do.
 _BAD = -1
+_NONE = 1_000_000_000
 
 
 @njit(cache=True, error_model="numpy", nogil=True)
-def _exponent(data: npt.NDArray[np.uint8], start: int, stop: int) -> tuple[int, int]:
-    """The exponent whose ``e`` stands before ``start``, and where it ends; -1 if it is none."""
+def _exponent(data: npt.NDArray[np.uint8], start: int, stop: int) -> int:
+    """The exponent between ``start`` and ``stop``; 10**9 if it is none."""
     i, sign, value = start, 1, 0
     if i < stop and (data[i] == 43 or data[i] == 45):
         sign = -1 if data[i] == 45 else 1
         i += 1
-    first = i
-    for k in range(first, min(stop, first + 10)):
+    if i == stop or stop - i > 9:
+        return _NONE
+    for k in range(i, stop):
         if data[k] < 48 or data[k] > 57:
-            break
-        value = value * 10 + (int(data[k]) - 48)
-        i = k + 1
-    if i == first or i - first > 9:
-        return 0, -1
-    return sign * value, i
+            return _NONE
+        value = value * 10 + int(data[k]) - 48
+    return sign * value
 
 
-@njit(cache=True, error_model="numpy", nogil=True)
-def _number(data: npt.NDArray[np.uint8], start: int, stop: int, found: Ints) -> int:
-    """Measure the decimal number at ``start``; gives back where it ends, -1 if it is none.
+@njit(error_model="numpy", nogil=True, inline="always")
+def _number(data: npt.NDArray[np.uint8], start: int, stop: int, found: Ints) -> bool:
+    """Measure the decimal number between ``start`` and ``stop``; False if it is none.
 
     ``found``: decimals, digits without leading zeros, significant digits without zeros before or
-    behind, whether the decimals end in zeros, whether there is an exponent.
+    behind, whether the decimals end in zeros, whether there is an exponent.  The digits in the
+    middle are not looked at: who parses the number does that.
     """
-    i = start
-    if i < stop and (data[i] == 43 or data[i] == 45):
-        i += 1
-    begin, first, last = i, -1, -1
-    for i in range(begin, stop + 1):
-        if i == stop or data[i] < 48 or data[i] > 57:
+    begin = start
+    if begin < stop and (data[begin] == 43 or data[begin] == 45):
+        begin += 1
+    end = stop
+    for k in range(stop - 1, max(begin, stop - 12) - 1, -1):
+        if data[k] == 101 or data[k] == 69:
+            end = k
             break
-        if data[i] != 48:
-            last = i
-            if first < 0:
-                first = i
-    point, end = i, i
-    if i < stop and data[i] == 46:
-        for end in range(i + 1, stop + 1):
-            if end == stop or data[end] < 48 or data[end] > 57:
-                break
-            if data[end] != 48:
-                last = end
-                if first < 0:
-                    first = end
+    point = end
+    for k in range(begin, end):
+        if data[k] == 46:
+            point = k
+            break
+        if data[k] < 48 or data[k] > 57:
+            return False
     fraction = max(end - point - 1, 0)
     if (point - begin) + fraction == 0:
-        return -1
-    shown = end - first - (1 if first < point < end else 0) if first >= 0 else 0
-    significant = last - first + 1 - (1 if first < point < last else 0) if first >= 0 else 0
-    exponent, after = 0, end
+        return False
+    first, last = end, begin - 1
+    for k in range(begin, end):
+        if data[k] != 48 and data[k] != 46:
+            first = k
+            break
+    for k in range(end - 1, begin - 1, -1):
+        if data[k] != 48 and data[k] != 46:
+            last = k
+            break
+    shown = end - first - (1 if first < point < end else 0)
+    significant = max(last - first + 1 - (1 if first < point < last else 0), 0)
+    exponent = 0
     found[4] = 0
-    if end < stop and (data[end] == 101 or data[end] == 69):
-        exponent, after = _exponent(data, end + 1, stop)
+    if end < stop:
+        exponent = _exponent(data, end + 1, stop)
+        if exponent == _NONE:
+            return False
         found[4] = 1
     found[0], found[1], found[2] = fraction - exponent, shown, significant
     found[3] = 1 if fraction > 1 and data[end - 1] == 48 else 0
-    return after
+    return True
 
 
-@njit(cache=True, error_model="numpy", nogil=True)
+@njit(error_model="numpy", nogil=True, inline="always")
 def _tell(found: Ints, size: int, k: int, decimals: Ints, digits: Ints, flags: Ints) -> bool:
     """Count one entry of column ``k``; False if it lies outside what is counted."""
     if abs(found[0]) > DECIMALS or found[1] > DIGITS:
@@ -128,28 +136,26 @@ def scan(
     """
     found = np.zeros(5, dtype=np.int64)
     column, start, rows, size = 0, 0, 0, data.size
-    for _ in range(size + 1):
-        if start >= size:
+    for i in range(size + 1):
+        if i < size and data[i] != 44 and data[i] != 10:
+            continue
+        if i == size and start == size and column == 0:
             break
-        stop = _number(data, start, size, found)
-        if stop < 0 or not _tell(found, stop - start, column, decimals, digits, flags):
+        line = i == size or data[i] == 10
+        stop = i - 1 if line and i > start and data[i - 1] == 13 else i
+        if column == columns or not _number(data, start, stop, found):
+            return _BAD
+        if not _tell(found, stop - start, column, decimals, digits, flags):
             return _BAD
         if found[2] >= _LONG and counts[column] < places.shape[1]:
             places[column, counts[column], 0] = start
             places[column, counts[column], 1] = stop
             counts[column] += 1
-        if stop < size and data[stop] == 44:
-            column, start = column + 1, stop + 1
-            if column == columns or start == size:
+        start, column = i + 1, column + 1
+        if line:
+            if column != columns:
                 return _BAD
-            continue
-        if stop < size and data[stop] == 13:
-            stop += 1
-        if stop < size and data[stop] != 10:
-            return _BAD
-        if column != columns - 1:
-            return _BAD
-        column, start, rows = 0, stop + 1, rows + 1
+            column, rows = 0, rows + 1
     return rows
 
 
