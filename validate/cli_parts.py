@@ -24,6 +24,8 @@ __all__ = [
     "with_causes",
 ]
 
+#: Rows of a long file among which causes are sought.
+_MOST_ROWS = 2000
 SYSTEMS = ("geometric", "SI", "astronomical")
 CHARTS = (
     "areal", "isotropic", "harmonic", "kerr-schild", "painleve-gullstrand",
@@ -113,8 +115,31 @@ def with_causes(result: CheckResult, *, always: bool) -> CheckResult:
     from truefall.validate.causes import explain
 
     with working(f"{result.name}: looking for causes") as tell:
-        found = explain(result, progress=lambda f: tell(f"{result.name}: trying causes: {f}"))
+        found = explain(
+            _thinned(result), progress=lambda f: tell(f"{result.name}: trying causes: {f}")
+        )
     return replace(result, explanation=found)
+
+
+def _thinned(result: CheckResult) -> CheckResult:
+    """A long file's result with few enough of the rows kept for causes to be sought in seconds."""
+    trajectory = result.trajectory
+    if result.totals is None or trajectory is None or len(trajectory) <= _MOST_ROWS:
+        return result
+    from dataclasses import replace
+
+    import numpy as np
+
+    from truefall.validate.compare import picked
+
+    total = len(trajectory)
+    rows = np.unique(np.linspace(0, total - 1, _MOST_ROWS).astype(np.int64))
+    return replace(
+        result,
+        trajectory=picked(trajectory, rows, total),
+        expected=picked(result.expected, rows, total),
+        comparison=picked(result.comparison, rows, total),
+    )
 
 
 def overrides_of(options: dict[str, Any]) -> dict[str, Any]:

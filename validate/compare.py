@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, fields, is_dataclass, replace
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, TypeVar
 
 import numpy as np
 import numpy.typing as npt
@@ -17,6 +17,7 @@ if TYPE_CHECKING:
 __all__ = ["Comparison", "Expected", "Guard", "compare", "picked"]
 
 Floats = npt.NDArray[np.float64]
+T = TypeVar("T")
 #: Rounding of a computed difference and its norm, relative to it (five roundings, 2^-52 each).
 _ROUNDING = 5 * float(np.finfo(np.float64).eps)
 
@@ -116,18 +117,24 @@ class Comparison:
         return np.asarray(np.linalg.norm(self.position_error, axis=1))
 
 
-def picked(comparison: Comparison, rows: npt.NDArray[np.int64]) -> Comparison:
-    """The comparison of some rows."""
-    total = comparison.time.size
+def picked(thing: T, rows: npt.NDArray[np.int64], total: int) -> T:
+    """Some rows of a dataclass of arrays (a comparison, expected values, a trajectory).
 
-    def pick(thing: Any) -> Any:
-        if isinstance(thing, np.ndarray) and thing.shape[:1] == (total,):
-            return thing[rows]
-        if is_dataclass(thing) and not isinstance(thing, type):
-            return replace(thing, **{f.name: pick(getattr(thing, f.name)) for f in fields(thing)})
-        return thing
+    Parameters
+    ----------
+    rows : (k,)
+    total : int
+        Rows there are: arrays of that length, also in nested dataclasses, are cut, others stay.
+    """
 
-    found: Comparison = pick(comparison)
+    def pick(part: Any) -> Any:
+        if isinstance(part, np.ndarray) and part.shape[:1] == (total,):
+            return part[rows]
+        if is_dataclass(part) and not isinstance(part, type):
+            return replace(part, **{f.name: pick(getattr(part, f.name)) for f in fields(part)})
+        return part
+
+    found: T = pick(thing)
     return found
 
 

@@ -120,6 +120,19 @@ def test_a_run_that_stops_early_is_told_as_such(monkeypatch):
     assert "did not reach the end: runge-kutta-4 (areal): step limit" in text(rows, [], {})
 
 
+def test_what_was_not_measured_is_not_told_as_perfect():
+    """Light has no energy to drift, particles no norm: null in the document."""
+    light = next(p for p in PROBLEMS if p.name == "light-deflected")
+    rows = measure(job("runge-kutta-4", problem=light, controls=(200.0,)), 1)
+    rows += measure(job("runge-kutta-4", controls=(200.0,)), 1)
+    first, second = document(rows, [], {})["runs"]
+
+    assert first["energy"] is None
+    assert first["norm"] > 0
+    assert second["norm"] is None
+    assert second["energy"] > 0
+
+
 def test_patterns_that_match_nothing_are_refused_with_a_hint():
     """One sentence, with what is near."""
     with pytest.raises(UsageError, match="did you mean 'taylor'"):
@@ -177,6 +190,7 @@ def test_the_command_refuses_a_file_in_the_place_of_its_folder(run, tmp_path):
     assert run("bench", "--out", tmp_path / "file").status == 4
     assert run("bench", "--out", tmp_path / "no" / "folder").status == 4
     assert run("bench", "--methods", "nothing", "--out", tmp_path / "x").status == 2
+    assert not (tmp_path / "x").exists()
 
 
 def test_long_runs_show_what_symplectic_methods_are_for():

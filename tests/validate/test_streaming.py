@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 from dataclasses import replace
 
 import h5py
@@ -340,3 +341,23 @@ def test_files_without_a_start_of_their_own_begin_at_their_first_row(tmp_path):
     assert result.judgements[0].unjudged_rows >= 0
     with pytest.raises(InputError, match="no velocities"):
         find_start(replace(trajectory, metadata=metadata, velocity=None), fit=False, stored=None)
+
+
+def test_a_long_file_gets_its_cause_and_a_picture(tmp_path, run):
+    """gm too large by a millionth: named from two thousand of the rows kept."""
+    keys = dict(CASES["satellite"])
+    true = Orbit(**keys | {"gm": keys["gm"] * (1 + 1e-6)})
+    trajectory = noisy("satellite")
+    position, velocity, clock = build_table(true, 0.0, 1.0).at(trajectory.time)
+    path = tmp_path / "long.h5"
+    write_trajectory(
+        path, replace(trajectory, position=position, velocity=velocity, proper_time=clock)
+    )
+    done = run(
+        "check", path, "--budget", "position=1e-3", "--report", tmp_path / "report", "--json"
+    )
+    (file,) = json.loads(done.out)["files"]
+
+    assert done.status == 1
+    assert file["findings"][0]["cause"] == "gm-scaled"
+    assert len(list((tmp_path / "report").glob("*cause-1*.png"))) == 1

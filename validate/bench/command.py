@@ -46,8 +46,8 @@ def bench(
     from truefall.validate.bench.results import document
     from truefall.validate.bench.summary import text
 
-    folder = _folder(out)
     planned = jobs_of(methods, equations, cases, quick=quick)
+    folder = _folder(out)
     if not sys.stderr.isatty():
         say(f"{len(planned)} combinations; the first run compiles the integrators", err=True)
     with working("compiling the integrators") as tell:
@@ -111,13 +111,19 @@ def _run_all(
             found[name] = _batch(batch, repeats)
         return [row for name in by_method for row in found[name]]
     from concurrent.futures import ProcessPoolExecutor, as_completed
+    from concurrent.futures.process import BrokenProcessPool
     from multiprocessing import get_context
 
     with ProcessPoolExecutor(cores, mp_context=get_context("spawn")) as pool:
         waiting = {pool.submit(_batch, batch, repeats): name for name, batch in by_method.items()}
         for done in as_completed(waiting):
-            found[waiting[done]] = done.result()
-            tell(f"{len(found)} of {len(by_method)} methods done, last {waiting[done]}")
+            name = waiting[done]
+            try:
+                found[name] = done.result()
+            except BrokenProcessPool:
+                say(f"{name}: its process was lost; its runs are left out", err=True)
+                found[name] = []
+            tell(f"{len(found)} of {len(by_method)} methods done, last {name}")
     return [row for name in by_method for row in found[name]]
 
 

@@ -54,8 +54,9 @@ class Measured:
         Largest error at the samples, relative to the size of the vector (clock: to the last
         reading); infinite where a row was not reached.
     energy, momentum, tilt, norm : float
-        Largest drifts: E relative to max(|E - 1|, 1/r), the vector L relative to its size, its
-        direction in radians, g(v, v) of light.
+        Largest drifts: E relative to max(|E - 1|, 1/r) (NaN for light, whose E is 1 by scaling),
+        the vector L relative to its size, the sine of its change of direction, g(v, v) of light
+        (NaN for particles).
     growth : float
         Measured rate at which the error grows on an unstable circle, per chart time; NaN on other
         orbits, and where the error is not seen to grow.
@@ -135,7 +136,11 @@ def measure(job: Job, repeats: int = 3) -> list[Measured]:
                 max_steps=_MOST_STEPS, **options,
             )  # fmt: skip
 
-        done = run()  # the first may compile
+        try:
+            done = run()  # the first may compile
+        except (ArithmeticError, ValueError) as error:
+            found.append(_refused(job, control, error))
+            continue
         seconds = np.inf
         for _ in range(repeats):
             begin = time.perf_counter()
@@ -145,6 +150,17 @@ def measure(job: Job, repeats: int = 3) -> list[Measured]:
                 break
         found.append(_held(job, equations, truth, done, control, seconds))
     return found
+
+
+def _refused(job: Job, control: float, error: Exception) -> Measured:
+    """A run that could not be made: nothing measured, and why."""
+    none = float("nan")
+    return Measured(
+        problem=job.problem.name, equations=job.equations, variable=job.variable,
+        method=job.method, control=control, position=float("inf"), velocity=none, clock=none,
+        energy=none, momentum=none, tilt=none, norm=none, growth=none, steps=0, rejected=0,
+        evaluations=0, seconds=none, status=f"refused: {error}"[:200],
+    )  # fmt: skip
 
 
 def _held(
@@ -173,8 +189,8 @@ def _held(
         position=largest(np.linalg.norm(error, axis=1) / sizes[0]),
         velocity=largest(np.linalg.norm(run.velocity - truth.velocity, axis=1) / sizes[1]),
         clock=largest(run.clock - truth.clock) / abs(float(truth.clock[-1])),
-        energy=0.0 if truth.light else largest(drift), momentum=largest(turn),
-        tilt=largest(tilt), norm=largest(inv.null) if truth.light else 0.0,
+        energy=float("nan") if truth.light else largest(drift), momentum=largest(turn),
+        tilt=largest(tilt), norm=largest(inv.null) if truth.light else float("nan"),
         growth=_growth(job.problem, truth, run.position),
         steps=run.steps, rejected=run.rejected, evaluations=run.evaluations, seconds=seconds,
         status=run.status,

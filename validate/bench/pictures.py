@@ -21,7 +21,7 @@ __all__ = ["draw_drifts", "draw_work"]
 _COLOURS = ("#0072B2", "#D55E00", "#009E73", "#CC79A7", "#E69F00", "#56B4E9", "#000000")
 _MARKERS = "osD^vP*X<>"
 _DASHES: tuple[Any, ...] = ("-", "--", "-.", ":", (0, (5, 1, 1, 1, 1, 1)))
-_MOST_CURVES = 12
+_MOST_CURVES = 16
 _STYLE: Any = {
     "font.size": 10, "axes.titlesize": 11, "legend.fontsize": 9, "axes.spines.top": False,
     "axes.spines.right": False,
@@ -74,7 +74,7 @@ def _one(axes: Axes, curves: dict[tuple[str, str, str], list[Measured]], cost: s
     axes.set_xscale("log")
     axes.set_yscale("log")
     axes.grid(True, which="major", color="0.9", lw=0.6)
-    axes.set_xlabel("evaluations" if cost == "evaluations" else "time / s")
+    axes.set_xlabel("evaluations (taylor: series)" if cost == "evaluations" else "time / s")
 
 
 def _figure(width: float, height: float) -> Any:

@@ -91,7 +91,7 @@ def _order_lines(rows: Sequence[Measured]) -> list[str]:
     if not good and not off:
         return []
     lines = [f"order on bound-strong: {good} combinations within 0.3 of their nominal order"]
-    lines += [f"  off (steps too long, or round-off): {line}" for line in off[:6]]
+    lines += [f"  not within 0.3 of nominal: {line}" for line in off[:6]]
     if off[6:]:
         lines.append(f"  and {len(off) - 6} more")
     return lines
@@ -119,6 +119,11 @@ def text(
                 f"  {d.method + ', ' + d.equations:<50} position {d.position[-1]:.0e}  "
                 f"energy {d.energy.max():.0e}"
             )
+    lines += [
+        "",
+        "An evaluation is one of the right-hand side; for taylor it is a whole series.  Times are",
+        "those of a shared machine: orders of magnitude mean something, factors of two little.",
+    ]
     return "\n".join(lines)
 
 

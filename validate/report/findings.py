@@ -7,6 +7,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
+import numpy.typing as npt
 
 from truefall.validate.report.style import GUARD, OBTAINED, POSITION, log_axis, readable, time_scale
 
@@ -73,6 +74,13 @@ def findings_json(result: CheckResult) -> dict[str, Any]:
     }
 
 
+def _rows(result: CheckResult, explained: int) -> npt.NDArray[np.int64]:
+    """The rows that were explained: all, or of a long file evenly chosen ones."""
+    assert result.comparison is not None
+    total = result.comparison.time.size
+    return np.unique(np.linspace(0, total - 1, explained).astype(np.int64))
+
+
 def write_findings_figures(result: CheckResult, directory: Path, stem: str) -> list[Path]:
     """Write ``<stem>-cause-<k>-<name>.png`` for each finding: the residual before and after."""
     explanation = result.explanation
@@ -85,14 +93,16 @@ def write_findings_figures(result: CheckResult, directory: Path, stem: str) -> l
     from truefall.validate.report.text import units_of
 
     units = units_of(result.spec.system)
-    time = result.comparison.time
-    factor, unit = time_scale(float(np.ptp(time)), units["time"])
-    guard = result.comparison.position_guard.total
+    everything = result.comparison.time
+    factor, unit = time_scale(float(np.ptp(everything)), units["time"])
+    guards = result.comparison.position_guard.total
     written = []
     style: Any = {"font.size": 9.5, "axes.titlesize": 10.5, "legend.fontsize": 9,
                   "axes.spines.top": False, "axes.spines.right": False}  # fmt: skip
     with mpl.rc_context(style):
         for k, finding in enumerate(explanation.findings, 1):
+            rows = _rows(result, finding.before.size)
+            time, guard = everything[rows], guards[rows]
             figure = Figure(figsize=(7.6, 3.9), layout="constrained")
             FigureCanvasAgg(figure)
             axes = figure.subplots()

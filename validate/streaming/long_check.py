@@ -176,7 +176,7 @@ def _judged_rows(
     judgements = whole_file(
         judgements_of(comparison, budget, judged, kept.path, light),
         judgements_of(rough, budget, judged, kept.path, light),
-        judgements_of(picked(comparison, rows), budget, judged[rows], kept.path, light),
+        judgements_of(picked(comparison, rows, len(kept)), budget, judged[rows], kept.path, light),
         screened.counts, screened.rows, rows, ends[1] - ends[0],
     )  # fmt: skip
     beyond, past = result.verdict, result.reason
