@@ -17,6 +17,7 @@ from truefall.validate.cli_parts import (
     Commands,
     declarations,
     overrides_of,
+    partner_of,
     show_versions,
     with_causes,
 )
@@ -93,9 +94,15 @@ def check(
         with working(f"checking {path}{count}"):
             found, fault = _check_one(path, given)
         faulty = faulty or fault
-        found = [with_causes(result, always=explain) for result in found]
+        if len(files) != 2:
+            found = [with_causes(result, always=explain) for result in found]
+            for result in found:
+                _show(result, explain=explain, err=as_json)
         results += found
-        for result in found:
+    if len(files) == 2:  # two runs of one orbit tell more together: the order of a step
+        both = results
+        results = [with_causes(r, always=explain, other=partner_of(r, both)) for r in both]
+        for result in results:
             _show(result, explain=explain, err=as_json)
     if report is not None:
         from truefall.validate.report import write_report

@@ -20,6 +20,7 @@ __all__ = [
     "declarations",
     "finite_number",
     "overrides_of",
+    "partner_of",
     "show_versions",
     "with_causes",
 ]
@@ -106,8 +107,27 @@ def _bundled(name: str) -> str:
     return ""
 
 
-def with_causes(result: CheckResult, *, always: bool) -> CheckResult:
-    """The result with the causes of its residual, unless it passes and nobody asked."""
+def partner_of(result: CheckResult, results: list[CheckResult]) -> CheckResult | None:
+    """The one other result of the same orbit, if there is exactly one with the same stamps."""
+    if result.orbit is None or result.comparison is None:
+        return None
+    time = result.comparison.time
+    same = [
+        r for r in results
+        if r is not result and r.orbit is not None and r.comparison is not None
+        and (r.orbit.position, r.orbit.velocity) == (result.orbit.position, result.orbit.velocity)
+        and r.comparison.time.shape == time.shape and bool((r.comparison.time == time).all())
+    ]  # fmt: skip
+    return same[0] if len(same) == 1 else None
+
+
+def with_causes(
+    result: CheckResult, *, always: bool, other: CheckResult | None = None
+) -> CheckResult:
+    """The result with the causes of its residual, unless it passes and nobody asked.
+
+    ``other`` is a second run of the same orbit, from which the order of a method is told.
+    """
     if result.comparison is None or (result.verdict == "pass" and not always):
         return result
     from dataclasses import replace
@@ -116,7 +136,9 @@ def with_causes(result: CheckResult, *, always: bool) -> CheckResult:
 
     with working(f"{result.name}: looking for causes") as tell:
         found = explain(
-            _thinned(result), progress=lambda f: tell(f"{result.name}: trying causes: {f}")
+            _thinned(result),
+            progress=lambda f: tell(f"{result.name}: trying causes: {f}"),
+            second_file=None if other is None else _thinned(other),
         )
     return replace(result, explanation=found)
 

@@ -122,3 +122,30 @@ def test_make_writes_every_case_into_a_folder(run, tmp_path, monkeypatch):
     (tmp_path / "file").write_text("")
     assert run("make", "--all-cases", "--out", str(tmp_path / "file")).status == 4
     assert run("make", "--all-cases", "--case", "x", "--out", str(folder)).status == 2
+
+
+def test_two_runs_of_one_orbit_tell_the_order_of_the_step(run: Run, tmp_path: Path) -> None:
+    """Runge-Kutta at a step and at half of it: fourth order, told with either file."""
+    import numpy as np
+
+    from truefall.integrators import propagate
+
+    times = np.linspace(0.0, 1000.0, 401)
+    start, speed = (12.0, 0.0, 0.0), (0.0, 0.3, 0.0)
+    paths = []
+    for name, step in (("coarse", 2.0), ("fine", 1.0)):
+        done = propagate("areal", start, speed, times, method="runge-kutta-4", step=step)
+        rows = np.column_stack([done.time, done.position, done.velocity])
+        lines = [",".join(map(repr, row)) for row in rows.tolist()]
+        head = ['# system = "geometric"', "# gm = 1.0", '# particle = "massive"',
+                '# chart = "areal"', '# clock = "coordinate"', "time,x,y,z,vx,vy,vz"]  # fmt: skip
+        paths.append(tmp_path / f"{name}.csv")
+        paths[-1].write_text("\n".join([*head, *lines]) + "\n")
+    done = run("check", *paths, "--budget", "position=1e-9", "--json")
+    files = json.loads(done.out)["files"]
+
+    assert done.status == 1
+    for file in files:
+        finding = file["findings"][0]
+        assert finding["cause"] == "step-too-large"
+        assert finding["parameters"]["order"]["value"] == pytest.approx(4.0, abs=0.3)
