@@ -16,7 +16,7 @@ from truefall.integrators.methods import Problem
 from truefall.integrators.symplectic import extended, schwarzschild
 from truefall.integrators.symplectic.extended import extended_step
 from truefall.integrators.symplectic.index_entries import methods
-from truefall.integrators.symplectic.time_transformed import cartesian_step
+from truefall.integrators.symplectic.time_transformed import cartesian_step, mino_step
 from truefall.reference import Orbit
 from truefall.reference.charts import convert
 
@@ -106,9 +106,9 @@ def _deviations(step, par, code, table, y, h, many, every, out):
     return worst
 
 
-def _reference_problem(name, h, many=1_000_000, every=10):
+def _reference_problem(name, h, many=1_000_000, every=10, r=11.0):
     """E = .995, p_phi = 4.6, theta = pi/2, p_r = 0 at r = 11, p_theta from the norm."""
-    energy, spin, r = 0.995, 4.6, 11.0
+    energy, spin = 0.995, 4.6
     turning = np.sqrt(r * r * (energy**2 / (1 - 2 / r) - 1) - spin**2)
     y = np.array([r, np.pi / 2, 0.0, 0.0, turning, spin, 0.0, 0.0])
     parts = schwarzschild.four_parts(name, Problem(8, 0, 8, 2, False))
@@ -147,6 +147,13 @@ def test_levels_of_the_four_part_splitting(name, h, level, record_property):
     record_property(f"{name} h={h}", worst)
     assert 0.9 * level < worst <= level
     assert abs(slope) < 3.0 * uncertainty
+
+
+@pytest.mark.parametrize(("name", "level"), [("strang-2", 1.96e-8), ("yoshida-4", 6.45e-13)])
+def test_levels_of_the_four_part_splitting_farther_out(name, level):
+    """Start at r = 70, h = 1: 1.95e-8 and 6.4e-13, recomputed elsewhere."""
+    worst, _ = _reference_problem(name, 1.0, r=70.0)
+    assert 0.95 * level < worst <= level
 
 
 def test_a_method_that_drifts_is_seen_to_drift():
@@ -236,6 +243,66 @@ def test_extended_phase_space_keeps_the_form_of_both_copies(kind):
     # H(q, y) + H(x, p): q pairs with p, x with y
     assert np.abs(jacobian - np.eye(12)).max() > 0.01
     assert np.abs(jacobian.T @ form @ jacobian - form).max() < 1e-9
+
+
+def test_logarithmic_leapfrog_keeps_the_form_with_time_and_energy():
+    """Positions and lambda against velocities and B, which the kernel keeps in its memory."""
+    parts = METHODS["time-transformed-blanes-moan-6"].parts(Problem(2, 2, 8, 6, False))
+    par = np.array([0.96, 1.0, 12.0])
+
+    def step(z):
+        y, change, memory = np.zeros(8), np.zeros(8), np.zeros(parts.memory)
+        y[:3], y[7] = z[:3], z[3]
+        memory[0], memory[1] = (1.0, z[7], 0.0), z[4:7]
+        cartesian_step(2, 2, par, parts.code, parts.table, 1.0, y, 0.7, memory, change)
+        return np.concatenate([z[:3] + change[:3], [z[3] + change[7]], memory[1], [z[7]]])
+
+    jacobian = _jacobian(step, np.array([8.0, 1.2, 0.7, 0.0, 0.1, 0.3, 0.1, 0.09]), 2e-4)
+    form = np.block([[np.zeros((4, 4)), np.eye(4)], [-np.eye(4), np.zeros((4, 4))]])
+    assert np.abs(jacobian - np.eye(8)).max() > 0.1
+    assert np.abs(jacobian.T @ form @ jacobian - form).max() < 1e-9
+
+
+@pytest.mark.parametrize("name", ["strang-2", "blanes-moan-6", "kahan-li-8"])
+def test_mino_leapfrog_keeps_areas(name):
+    """u and w = du/ds are conjugate: the determinant of their Jacobian is 1."""
+    parts = METHODS[f"mino-leapfrog-{name}"].parts(Problem(9, 0, 10, 2, False))
+    par = np.array([0.96, 1.0, 14.0])
+
+    def step(z):
+        y, change = np.zeros(10), np.zeros(10)
+        y[:2] = z
+        mino_step(9, 0, par, parts.code, parts.table, 1.0, y, 0.3, np.zeros((1, 1)), change)
+        return z + change[:2]
+
+    jacobian = _jacobian(step, np.array([0.1, 0.04]), 1e-4)
+    assert np.abs(jacobian - np.eye(2)).max() > 0.1
+    assert abs(np.linalg.det(jacobian) - 1.0) < 1e-9
+
+
+@pytest.mark.parametrize(
+    ("name", "equations", "steps"),
+    [
+        ("four-part-kahan-li-8", "areal", 200),
+        ("three-part-blanes-moan-6", "areal", 200),
+        ("extended-phase-space-kahan-li-8", "harmonic", 800),
+        ("time-transformed-kahan-li-8", "areal-cartesian", 200),
+        ("mino-leapfrog-kahan-li-8", "mino", 200),
+    ],
+)
+def test_weak_fields_keep_their_digits(name, equations, steps):
+    """GM/(c^2 r) = 6e-10, one revolution: 2e-14 of the radius, the clock to rounding."""
+    r = 1.6e9
+    rate = r**-1.5
+    period = 2 * np.pi / rate
+    x, v = np.array([r, 0.1 * r, 0.05 * r]), np.array([0.0, 1.1 * r * rate, 0.1 * r * rate])
+    chart = EQUATIONS[equations].chart
+    times = np.linspace(0.0, period, 4)
+    exact = Orbit(chart=chart, position=x, velocity=v).at(times)
+    unit = {"areal-cartesian": 1.0 / r, "mino": 1.0 / r**2}.get(equations, 1.0)
+    run = propagate(equations, x, v, times, method=name, step=period / steps * unit)
+    assert np.linalg.norm(run.position - exact.position, axis=1).max() < 2e-14 * r
+    assert np.abs(run.clock - exact.proper_time).max() < 2e-15 * period
 
 
 @pytest.mark.parametrize("name", NAMES)
