@@ -139,3 +139,32 @@ def test_a_failing_check_names_the_cause_and_draws_it(run, exact, tmp_path):
     assert len(pictures) == 1
     (result,) = check_file(exact)
     assert result.explanation is None  # the library explains when it is asked to
+
+
+def test_on_an_unstable_orbit_nothing_alone_is_blamed():
+    """A push of 1e-10 on the circle r = 4 may as well be truncation: said so, and listed."""
+    import numpy as np
+
+    from truefall.reference import Orbit
+    from truefall.validate.causes import explain
+    from truefall.validate.check import check_trajectory
+    from truefall.validate.trajectory import Trajectory
+
+    start, speed = (4.0, 0.0, 0.0), (0.0, 0.5, 0.0)
+    times = np.linspace(0.0, 150.0, 151)
+    moved = Orbit(position=(4.0, 0.0, 0.0), velocity=(0.0, 0.5 * (1 + 1e-9), 0.0)).at(times)
+    metadata = {
+        "system": "geometric", "gm": 1.0, "particle": "massive", "chart": "areal",
+        "clock": "coordinate", "start": {"position": list(start), "velocity": list(speed)},
+    }  # fmt: skip
+    result = check_trajectory(
+        Trajectory("run", "run", times, moved.position, moved.velocity, moved.proper_time, None,
+                   None, metadata)
+    )  # fmt: skip
+    found = explain(result)
+
+    assert result.orbit.orbit_class == "circular-unstable"
+    assert found.findings
+    assert found.findings[0].family in ("start", "constants", "forces", "clock")
+    assert "cannot tell them apart" in found.findings[0].text
+    assert {"round-off", "step-too-large"} < found.ambiguous[-1]

@@ -38,5 +38,6 @@ def explain(
     Explanation
     """
     from truefall.validate.causes.explaining import explanation_of
+    from truefall.validate.causes.unstable import with_instability
 
-    return explanation_of(result, progress, second_file)
+    return with_instability(explanation_of(result, progress, second_file), result)
