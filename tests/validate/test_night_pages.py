@@ -18,7 +18,7 @@ from truefall.validate.nightly.pages.html_page import night_page
 from truefall.validate.nightly.pages.json_report import report_document
 from truefall.validate.nightly.pages.junit import junit_xml
 from truefall.validate.nightly.pages.pictures import error_picture, trend_picture
-from truefall.validate.nightly.pages.words import headline, number, share
+from truefall.validate.nightly.pages.words import alike, deciding, headline, number, share
 
 _DATA = Path(__file__).with_name("night_pages_data.py")
 _SPEC = importlib.util.spec_from_file_location("night_pages_data", _DATA)
@@ -213,9 +213,54 @@ def test_pictures_show_what_there_is_and_say_it_in_words():
     assert trend_picture(case, data.trend(1, 1)).count("<circle") == 1
 
 
+def test_cases_with_one_cause_are_told_once_and_the_deciding_quantity_is_named():
+    """Of 42 failures of one cause one is shown in full; a clock out of budget is called so."""
+    found = ({"cause": "gm-in-wrong-unit", "family": "constants", "text": "gm is in km"},)
+    cases = tuple(data.case(k, "fail", findings=found) for k in range(42))
+    errors = {
+        "position": {"max": 1e-9, "rms": 1e-9, "at_time": 1.0},
+        "clock": {"max": 5e-3, "rms": 1e-3, "at_time": 1.0},
+    }
+    budget = {"position": 1e-6, "clock": 1e-3}
+    late = data.case(50, "fail", errors=errors, budget=budget, margin=-4.0)
+    night = data.night((*cases, late), alarms=())
+    groups, left_out = alike(night)
+    page = night_page(night, {})
+
+    assert sorted(len(g) for g in groups) == [1, 42]
+    assert left_out == 0
+    assert "The same in 41 more:" in page
+    assert deciding(late) == "clock"
+    assert "Largest clock error 5.0e-03 s, budget 1.0e-03." in page
+    assert deciding(data.case(1, budget={"per_revolution.position": 1e-6})) == ""
+
+
+def test_large_campaigns_keep_the_page_bounded():
+    """Two thousand cases: the worst are shown, the rest is counted; the JSON has all."""
+    cases = tuple(data.case(k, name=f"case-{k:04d}") for k in range(2000))
+    alarms = tuple(data.Alarm("error-grew", c.key, "grew") for c in cases)
+    night = data.night(cases, alarms=alarms)
+    page = night_page(night, {})
+
+    assert len(page.encode()) < 3_000_000
+    assert "1500 better cases are not shown" in page
+    assert "And 1960 more, all in" in page
+    assert len(report_document(night)["cases"]) == 2000
+
+
+def test_names_that_utf_8_cannot_hold_are_written_all_the_same(tmp_path):
+    """Lone surrogates, as file names that are no UTF-8 give them."""
+    bad = data.case(0, "fail", name="x\udcff", reason="\udcff", result_set="nights/\udcff#.h5")
+    paths = write_pages(data.night((bad,)), {}, tmp_path)
+
+    assert json.loads(paths[1].read_text("utf-8"))["cases"][0]["case"] == "x\udcff"
+    assert "%23.h5" in paths[0].read_text("utf-8")
+    assert "x#xDCFF" in paths[2].read_text("utf-8")
+
+
 def test_numbers_in_words():
     """Two digits, shares in per cent, dashes for nothing."""
     assert [number(v) for v in (None, float("nan"), 0.0, 1.234e-7)] == ["–", "–", "0", "1.2e-07"]
     assert [share(v) for v in (None, 0.5, 1.0, 0.9998, -0.5, -40.0)] == [
-        "–", "50 %", "100 %", "100.0 %", "-50 %", "41 times over",
+        "–", "50 %", "100 %", "> 99 %", "-50 %", "41 times the budget",
     ]  # fmt: skip

@@ -44,5 +44,5 @@ def report_document(night: Night) -> dict[str, Any]:
 
 
 def report_text(night: Night) -> str:
-    """The document as text."""
-    return json.dumps(report_document(night), indent=1, ensure_ascii=False, allow_nan=False) + "\n"
+    """The document as text; in ASCII, since names may hold what UTF-8 cannot (lone surrogates)."""
+    return json.dumps(report_document(night), indent=1, allow_nan=False) + "\n"

@@ -11,7 +11,10 @@ if TYPE_CHECKING:
 
 __all__ = [
     "MARKS",
+    "alike",
+    "clipped",
     "counted",
+    "deciding",
     "headline",
     "number",
     "printable",
@@ -21,6 +24,9 @@ __all__ = [
     "summary_line",
     "worst_cases",
 ]
+
+#: Longest name on the one line.
+_LONGEST_NAME = 80
 
 #: Verdict to the sign shown before its word: meaning is never told by colour alone.
 MARKS = {
@@ -42,6 +48,15 @@ def printable(text: str) -> str:
     return "".join(c if c.isprintable() else "\N{REPLACEMENT CHARACTER}" for c in text)
 
 
+def clipped(text: str) -> str:
+    """A printable name, its middle left out where it is very long."""
+    text = printable(text)
+    if len(text) <= _LONGEST_NAME:
+        return text
+    half = _LONGEST_NAME // 2
+    return f"{text[:half]}…{text[-half + 1 :]}"
+
+
 def number(value: float | None) -> str:
     """A size with two digits; a dash for none."""
     if value is None or not math.isfinite(value):
@@ -55,8 +70,12 @@ def share(value: float | None) -> str:
         return "–"
     per_cent = 100 * value
     if per_cent < -999:
-        return f"{1 - value:.0f} times over"
-    return f"{per_cent:.0f} %" if abs(per_cent) < 99.5 or value == 1 else f"{per_cent:.1f} %"
+        return f"{1 - value:.3g} times the budget"
+    if value < 1 and per_cent >= 99.5:
+        return "> 99 %"
+    if value < 0 and per_cent > -0.5:
+        return "> -1 %"
+    return f"{per_cent:.0f} %"
 
 
 def seconds(value: float) -> str:
@@ -100,16 +119,58 @@ def worst_cases(night: Night, most: int = 5) -> list[CaseRecord]:
     return [c for c in sorted(night.cases, key=severity) if c.verdict != "pass"][:most]
 
 
+def alike(night: Night, most: int = 6) -> tuple[list[list[CaseRecord]], int]:
+    """Cases that do not pass, those of one propagator with the same trouble together.
+
+    Returns
+    -------
+    list of lists of CaseRecord
+        At most ``most`` troubles, the worst first, and in each the worst case first.
+    int
+        How many cases that leaves out.
+    """
+    groups: dict[tuple[str, ...], list[CaseRecord]] = {}
+    for case in worst_cases(night, len(night.cases)):
+        groups.setdefault(_trouble(case), []).append(case)
+    found = list(groups.values())
+    return found[:most], sum(len(group) for group in found[most:])
+
+
+def _trouble(case: CaseRecord) -> tuple[str, ...]:
+    """Equal for cases that one look explains together."""
+    if case.verdict == "fail" and case.findings:
+        cause = str(case.findings[0].get("cause", ""))
+        return (case.propagator, case.verdict, cause)
+    if case.reason or case.outcome != "ran":
+        return (case.propagator, case.verdict, case.outcome, case.reason)
+    return (case.propagator, case.verdict, case.key)
+
+
+def deciding(case: CaseRecord) -> str:
+    """The quantity that has the least of its budget left; "" where that is not known.
+
+    Tolerances per revolution need the revolutions of each row, which a record does not hold.
+    """
+    left: dict[str, float] = {}
+    for quantity, budget in case.budget.items():
+        largest = case.errors.get(quantity, {}).get("max")
+        if largest is not None and budget > 0:
+            left[quantity] = 1.0 - (largest + case.guards.get(quantity, 0.0)) / budget
+        elif quantity.startswith("per_revolution"):
+            return ""
+    return min(left, key=left.__getitem__) if left else ""
+
+
 def summary_line(night: Night) -> str:
     """The night on one line, for a chat or a mail."""
     alarms = [a for a in night.alarms if a.level == "alarm"]
     standing = [a for a in night.alarms if a.level == "standing"]
     words = {0: "OK", 1: "OUT OF BUDGET OR WORSE", 3: "UNDECIDED", 4: "NOT USABLE"}
     head = words.get(night.exit_status, f"EXIT STATUS {night.exit_status}")
-    line = f"{head}  truefall night {night.number} of {printable(night.suite)}: {headline(night)}"
+    line = f"{head}  truefall night {night.number} of {clipped(night.suite)}: {headline(night)}"
     if alarms:
         first = alarms[0]
-        where = f" ({printable(first.key)})" if first.key else ""
+        where = f" ({clipped(first.key)})" if first.key else ""
         more = f" and {len(alarms) - 1} more" if len(alarms) > 1 else ""
         line += f" Alarm: {first.name}{where}{more}."
     if standing:
@@ -117,8 +178,12 @@ def summary_line(night: Night) -> str:
     worst = worst_cases(night, 1)
     if worst:
         case = worst[0]
-        line += f" Worst: {printable(case.key)}"
-        if case.position_error is not None:
+        line += f" Worst: {clipped(case.key)}"
+        quantity = deciding(case)
+        if quantity:
+            over = f"{number(case.errors[quantity]['max'])} for a budget of "
+            line += f", {quantity.replace('_', ' ')} error {over}{number(case.budget[quantity])}"
+        elif case.position_error is not None:
             unit = "GM/c^2" if case.unit_length == "1" else case.unit_length
             line += f", position error {number(case.position_error)} {unit}"
         elif case.outcome != "ran":
