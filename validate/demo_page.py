@@ -38,6 +38,18 @@ pre { overflow-x: auto; font-size: .82rem; line-height: 1.4; }
 .word { font-weight: 700; white-space: nowrap; }
 .PASS { color: var(--pass); } .FAIL { color: var(--fail); }
 .UNDECIDED { color: var(--undecided); }
+:focus-visible { outline: 3px solid; outline-offset: 2px; }
+caption { text-align: left; }
+@media (max-width: 34rem) {
+  h1 { font-size: 1.5rem; } .runs td, .runs th { padding-right: .5rem; font-size: .92rem; }
+  pre { font-size: .72rem; }
+}
+@media print {
+  :root { color-scheme: light; --pass: #1a7f37; --fail: #c1272d; --undecided: #9a6700; }
+  body { margin: 0; max-width: none; font-size: 10pt; }
+  section { margin-top: 0; border: 0; break-before: page; } h2, p { break-after: avoid; }
+  img { max-height: 17cm; } pre { font-size: 7.5pt; white-space: pre-wrap; }
+}
 """
 _POLICY = "default-src 'none'; style-src 'unsafe-inline'; img-src data:"
 
@@ -54,7 +66,8 @@ def page(chapters: Sequence[Chapter]) -> str:
     for c in chapters:
         name, text = html.escape(c.name), html.escape(c.text)
         rows.append(
-            f'<tr><td>{_word(c)}</td><td><a href="#{name}">{name}</a></td><td>{text}</td></tr>'
+            f'<tr><td>{_word(c)}</td><th scope="row"><a href="#{name}">{name}</a></th>'
+            f"<td>{text}</td></tr>"
         )
         pictures = "\n".join(
             f'<p><a href="{html.escape(link)}"><img alt="{name}: orbit, errors and invariants" '
@@ -65,22 +78,26 @@ def page(chapters: Sequence[Chapter]) -> str:
             f'<section id="{name}">\n<h2>{_word(c)} {name}</h2>\n<p>{text}. Files: '
             f'<a href="input/{name}.csv">trajectory</a>, <a href="input/{name}.toml">orbit</a>, '
             f'<a href="{name}/report.json">report as JSON</a>.</p>\n{pictures}\n'
-            f"<pre>{html.escape(c.report)}</pre>\n</section>"
+            f'<pre tabindex="0" role="region" aria-label="report of {name}">'
+            f"{html.escape(c.report)}</pre>\n</section>"
         )
     return f"""<!doctype html>
 <html lang="en"><head><meta charset="utf-8"><title>truefall demo</title>
 <meta http-equiv="Content-Security-Policy" content="{_POLICY}">
 <meta name="viewport" content="width=device-width, initial-scale=1">
 <style>{_STYLE}</style></head><body>
+<main>
 <h1>Eight runs of one propagator</h1>
 <p>Invented data. The survey ship Halden keeps station off Corrow, a compact remnant; a beacon
 circles the Earth. Each file was judged by <code>truefall check</code> against the exact solution
 at its own time stamps. The exact path of probe Tern, with proven bounds, is in
 <a href="reference/tern.h5">reference/tern.h5</a>.</p>
-<table>
-<tr><th>verdict</th><th>file</th><th>what was run</th></tr>
+<table class="runs">
+<caption>What was run, and how it was judged</caption>
+<tr><th scope="col">verdict</th><th scope="col">file</th><th scope="col">what was run</th></tr>
 {chr(10).join(rows)}
 </table>
 {chr(10).join(parts)}
+</main>
 </body></html>
 """

@@ -9,6 +9,8 @@ from pathlib import Path
 
 import pytest
 
+from truefall.validate.demo_page import Chapter
+from truefall.validate.demo_page import page as demo_page
 from truefall.validate.nightly.pages import write_pages
 
 _SPEC = importlib.util.spec_from_file_location(
@@ -161,3 +163,41 @@ def test_contrast_is_enough_in_light_and_dark(browser, pages, scheme):
 
     assert len(ratios) > 500
     assert min(ratios) >= 4.5
+
+
+@pytest.mark.parametrize("scheme", ["light", "dark"])
+def test_print_is_dark_on_white_and_compact(browser, pages, scheme):
+    """On paper every scheme gives dark text, and the table stays a table."""
+    page = opened(browser, pages / "large" / "index.html", 700, scheme)
+    page.emulate_media(media="print", color_scheme=scheme)
+    ratios = page.evaluate(CONTRAST, ".v, .soft, p, th, td, caption, a")
+    paper = page.evaluate("getComputedStyle(document.body).backgroundColor")
+    row = page.evaluate("getComputedStyle(document.querySelector('#case-0')).display")
+    page.close()
+
+    assert paper == "rgb(255, 255, 255)"
+    assert min(ratios) >= 4.5
+    assert row == "table-row"
+
+
+@pytest.mark.parametrize("width", [380, 1400])
+def test_the_index_page_of_the_demo_fits_and_names_its_parts(browser, tmp_path, width):
+    """Long lines of a report scroll inside it, also with the keyboard; tables have headers."""
+    words = ("PASS", "FAIL", "UNDECIDED")
+    chapters = [
+        Chapter(f"tern-few-digits-{w.lower()}", w, "written with seven digits", (), "x" * 200)
+        for w in words
+    ]
+    path = tmp_path / "index.html"
+    path.write_text(demo_page(chapters), encoding="utf-8")
+    page = opened(browser, path, width)
+    found = page.evaluate(
+        """() => [document.documentElement.scrollWidth,
+          [...document.querySelectorAll('th')].filter(t => !t.scope).length,
+          [...document.querySelectorAll('pre')].filter(
+            p => p.tabIndex === 0 && p.getAttribute('aria-label')).length,
+          document.querySelectorAll('main caption').length]"""
+    )
+    page.close()
+
+    assert found == [width, 0, 3, 1]
