@@ -113,6 +113,7 @@ def test_no_forbidden_constructs(path: Path) -> None:
 
 
 def test_the_search_for_forbidden_constructs_finds_them() -> None:
+    # text that the search is tried on; nothing of it is run
     bad = (
         "while True:\n    pass\nwhile 1:\n    pass\ntry:\n    pass\nexcept:\n    pass\n"
         "assert True\nraise Not" + "ImplementedError\npytest.mark.x" + "fail\n"

@@ -12,7 +12,7 @@ import subprocess
 import sys
 import tempfile
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -22,10 +22,10 @@ import numpy.typing as npt
 if TYPE_CHECKING:
     from truefall.reference import Orbit
 
-__all__ = ["main", "measure"]
+__all__ = ["best_of", "main", "measure", "show"]
 
 
-def _best(work: Callable[[], object], repeats: int = 3) -> float:
+def best_of(work: Callable[[], object], repeats: int = 3) -> float:
     """Shortest of a few runs, in seconds."""
     times = []
     for _ in range(repeats):
@@ -85,7 +85,7 @@ def _table_figures(figures: dict[str, float]) -> None:
     orbit = _subject()
     period = orbit.radial_period
     assert period is not None
-    figures["build table, s"] = _best(lambda: build_table(orbit, 0.0, 1.0))
+    figures["build table, s"] = best_of(lambda: build_table(orbit, 0.0, 1.0))
     table = build_table(orbit, 0.0, 1.0)
     rng = np.random.default_rng(1)
     for name, turns in (("revolution 1", 0.0), ("revolution 1,000,000", 1e6)):
@@ -106,15 +106,15 @@ def _table_figures(figures: dict[str, float]) -> None:
     many = np.linspace(0.0, 1000 * period.value, 2_000_000)
     room = np.empty((many.size, 3)), np.empty((many.size, 3)), np.empty(many.size)
     table.fill(many, *room)
-    rate = many.size / _best(lambda: table.fill(many, *room), 5)
+    rate = many.size / best_of(lambda: table.fill(many, *room), 5)
     figures["table states per second"] = rate
     times = np.linspace(0.0, _REVOLUTIONS * period.value, _REVOLUTIONS * _SAMPLES)
     seconds, error = _dop853(times)
     figures[f"DOP853, {_REVOLUTIONS:,} revolutions of {_SAMPLES} samples, s"] = seconds
     figures["its largest position error, GM/c^2"] = error
-    at_hand = _best(lambda: table.at(times), 5)
+    at_hand = best_of(lambda: table.at(times), 5)
     figures["table at hand against it, times faster"] = seconds / at_hand
-    built = _best(lambda: build_table(_subject(), 0.0, 1.0).at(times))
+    built = best_of(lambda: build_table(_subject(), 0.0, 1.0).at(times))
     figures["table with orbit and building, times faster"] = seconds / built
 
 
@@ -124,7 +124,7 @@ def _size(vectors: npt.NDArray[np.float64]) -> npt.NDArray[np.float64]:
 
 def _process(*words: str) -> float:
     code = "from truefall.validate.cli import main; main()"
-    return _best(
+    return best_of(
         lambda: subprocess.run(
             [sys.executable, "-c", code, *words], capture_output=True, check=False
         )
@@ -145,8 +145,8 @@ def measure() -> dict[str, float]:
     orbit = fresh()
     times = np.linspace(0.0, 3480.0, 2000)
     figures: dict[str, float] = {}
-    figures["build orbit, s"] = _best(lambda: fresh().at([0.0, 100.0]))
-    figures["certified states per second"] = times.size / _best(lambda: orbit.at(times))
+    figures["build orbit, s"] = best_of(lambda: fresh().at([0.0, 100.0]))
+    figures["certified states per second"] = times.size / best_of(lambda: orbit.at(times))
     _table_figures(figures)
     with tempfile.TemporaryDirectory() as folder:
         spec = parse_orbit(
@@ -172,6 +172,11 @@ def main() -> None:
         from truefall.validate.benchmarks_long import measure_long
 
         figures |= measure_long()
+    show(figures)
+
+
+def show(figures: Mapping[str, float]) -> None:
+    """Print figures as a table, or with ``--json`` on the command line as one document."""
     if "--json" in sys.argv[1:]:
         print(json.dumps(figures, indent=1))
         return

@@ -10,7 +10,6 @@ their largest relative difference is stored beside it.  No code of the package i
 
 from __future__ import annotations
 
-import importlib.util
 import json
 import sys
 from concurrent.futures import ProcessPoolExecutor
@@ -18,28 +17,16 @@ from fractions import Fraction
 from pathlib import Path
 from typing import Any
 
+import mp_geodesic as geodesic
+import mp_quadrature as quadrature
 import mpmath
+import second_route_orbits as table
 from mpmath import mp
 
 HERE = Path(__file__).parent
 DATA = HERE.parent / "data" / "second_route.json"
 DIGITS = 36
 
-
-def _load(name: str) -> Any:
-    if name not in sys.modules:
-        spec = importlib.util.spec_from_file_location(name, HERE / f"{name}.py")
-        assert spec is not None
-        assert spec.loader is not None
-        module = importlib.util.module_from_spec(spec)
-        sys.modules[name] = module
-        spec.loader.exec_module(module)
-    return sys.modules[name]
-
-
-geodesic = _load("mp_geodesic")
-quadrature = _load("mp_quadrature")
-table = _load("second_route_orbits")
 
 KEYS = ("system", "gm", "particle", "chart", "clock", "position", "velocity")
 VECTORS = ("position", "velocity")

@@ -13,32 +13,18 @@ slower); results agree to the digits asked for.
 from __future__ import annotations
 
 import importlib.util
-import sys
 from collections.abc import Sequence
 from dataclasses import dataclass
 from fractions import Fraction
 from pathlib import Path
 from typing import Any
 
+import mp_metrics as metrics
+import mp_series as series
 import mpmath
 
 HERE = Path(__file__).parent
 
-
-def sibling(name: str) -> Any:
-    """A module of this folder (tests are no package, and are run in importlib mode)."""
-    if name not in sys.modules:
-        spec = importlib.util.spec_from_file_location(name, HERE / f"{name}.py")
-        assert spec is not None
-        assert spec.loader is not None
-        module = importlib.util.module_from_spec(spec)
-        sys.modules[name] = module
-        spec.loader.exec_module(module)
-    return sys.modules[name]
-
-
-metrics = sibling("mp_metrics")
-series = sibling("mp_series")
 
 LIGHT_SPEED = {
     "geometric": Fraction(1),

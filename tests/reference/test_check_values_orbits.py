@@ -5,11 +5,9 @@ Status beside each check: seen-1, seen-2, from memory, recomputed (with mpmath a
 
 from __future__ import annotations
 
-import importlib.util
-import sys
 from math import asin, degrees, nextafter, pi, sqrt
-from pathlib import Path
 
+import mp_quadrature as quadrature
 import mpmath
 import numpy as np
 import pytest
@@ -18,20 +16,6 @@ from truefall.reference import Orbit
 from truefall.reference import closed_form as cf
 from truefall.reference import landmarks as marks
 from truefall.reference import observables as obs
-
-
-def sibling(name):
-    """A helper module of this folder."""
-    if name not in sys.modules:
-        path = Path(__file__).parent / f"{name}.py"
-        spec = importlib.util.spec_from_file_location(name, path)
-        module = importlib.util.module_from_spec(spec)
-        sys.modules[name] = module
-        spec.loader.exec_module(module)
-    return sys.modules[name]
-
-
-quadrature = sibling("mp_quadrature")
 
 
 def full(bounded):

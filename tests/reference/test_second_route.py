@@ -10,16 +10,19 @@ from __future__ import annotations
 import ast
 import datetime
 import functools
-import importlib.util
 import json
-import sys
 from fractions import Fraction
 from math import nextafter
 from pathlib import Path
 
+import make_second_route as script
+import mp_geodesic as geodesic
+import mp_metrics as metrics
 import mpmath
 import numpy as np
 import pytest
+import second_route_compare as compare
+import second_route_orbits as table
 
 from truefall.reference import EndReached, Orbit
 
@@ -28,23 +31,6 @@ DATA = json.loads((HERE.parent / "data" / "second_route.json").read_text())
 ORBITS = {orbit["name"]: orbit for orbit in DATA["orbits"]}
 FAR = {orbit["name"]: orbit for orbit in DATA["far"]}
 RELATIVE = 1e-31
-
-
-def sibling(name):
-    """A helper module of this folder."""
-    if name not in sys.modules:
-        spec = importlib.util.spec_from_file_location(name, HERE / f"{name}.py")
-        module = importlib.util.module_from_spec(spec)
-        sys.modules[name] = module
-        spec.loader.exec_module(module)
-    return sys.modules[name]
-
-
-compare = sibling("second_route_compare")
-metrics = sibling("mp_metrics")
-geodesic = sibling("mp_geodesic")
-script = sibling("make_second_route")
-table = sibling("second_route_orbits")
 
 
 @pytest.fixture(autouse=True)

@@ -7,31 +7,18 @@ chi.  The start has 60 digits; from there the Cartesian equations of motion are 
 
 from __future__ import annotations
 
-import importlib.util
-import sys
 from fractions import Fraction
 from pathlib import Path
 
+import make_second_route as script
 import mpmath
 import pytest
+import second_route_compare as compare
 
 from truefall.reference import Orbit
 
 HERE = Path(__file__).parent
 
-
-def sibling(name):
-    """A helper module of this folder."""
-    if name not in sys.modules:
-        spec = importlib.util.spec_from_file_location(name, HERE / f"{name}.py")
-        module = importlib.util.module_from_spec(spec)
-        sys.modules[name] = module
-        spec.loader.exec_module(module)
-    return sys.modules[name]
-
-
-compare = sibling("second_route_compare")
-script = sibling("make_second_route")
 
 EARTH = {"system": "SI", "gm": 3.986004418e14}
 ELEMENTS = [

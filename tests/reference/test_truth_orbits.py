@@ -5,14 +5,15 @@ Those were made by Taylor integration in 320-bit arithmetic; see the file's own 
 
 from __future__ import annotations
 
-import importlib.util
 import json
-import sys
 from fractions import Fraction
 from pathlib import Path
 
+import mp_geodesic as geodesic
+import mp_quadrature as quadrature
 import mpmath
 import pytest
+import second_route_compare as compare
 
 from truefall.reference import EndReached, Orbit
 
@@ -20,21 +21,6 @@ HERE = Path(__file__).parent
 ORBITS = json.loads((HERE.parent / "data" / "truth_orbits.json").read_text())["orbits"]
 #: Samples of an entry that are an orbit (the others are shown not to be, below).
 USABLE = {"whirl-painleve": 1}
-
-
-def sibling(name):
-    """A helper module of this folder."""
-    if name not in sys.modules:
-        spec = importlib.util.spec_from_file_location(name, HERE / f"{name}.py")
-        module = importlib.util.module_from_spec(spec)
-        sys.modules[name] = module
-        spec.loader.exec_module(module)
-    return sys.modules[name]
-
-
-compare = sibling("second_route_compare")
-geodesic = sibling("mp_geodesic")
-quadrature = sibling("mp_quadrature")
 
 
 def _engine(entry):

@@ -6,33 +6,17 @@ shares nothing with the engine; ``python tests/outside/battery/run.py`` runs all
 
 from __future__ import annotations
 
-import importlib.util
 import json
-import sys
 from dataclasses import replace
-from pathlib import Path
 
 import numpy as np
 import pytest
+from battery import faults
 
 from truefall.validate.causes import explain
 from truefall.validate.check import check_trajectory
 from truefall.validate.trajectory import Trajectory
 
-BATTERY = Path(__file__).parent.parent / "outside" / "battery" / "faults.py"
-
-
-def _battery():
-    name = "battery_faults"
-    if name not in sys.modules:
-        spec = importlib.util.spec_from_file_location(name, BATTERY)
-        module = importlib.util.module_from_spec(spec)
-        sys.modules[name] = module
-        spec.loader.exec_module(module)
-    return sys.modules[name]
-
-
-faults = _battery()
 CASES = {case.name: case for case in faults.p.CASES}
 # shorter arcs than the battery's: these tests are run often
 CASES["strong"] = replace(CASES["strong"], last=700.0, count=141)

@@ -2,14 +2,13 @@
 
 from __future__ import annotations
 
-import importlib.util
 import json
-import sys
 from dataclasses import replace
 from html.parser import HTMLParser
 from pathlib import Path
 
 import junitparser
+import night_pages_data as data
 import pytest
 import xmlschema
 
@@ -19,14 +18,6 @@ from truefall.validate.nightly.pages.json_report import report_document
 from truefall.validate.nightly.pages.junit import junit_xml
 from truefall.validate.nightly.pages.pictures import error_picture, trend_picture
 from truefall.validate.nightly.pages.words import alike, deciding, headline, number, share
-
-_DATA = Path(__file__).with_name("night_pages_data.py")
-_SPEC = importlib.util.spec_from_file_location("night_pages_data", _DATA)
-assert _SPEC is not None
-data = importlib.util.module_from_spec(_SPEC)
-sys.modules["night_pages_data"] = data
-assert _SPEC.loader is not None
-_SPEC.loader.exec_module(data)
 
 
 class Markup(HTMLParser):

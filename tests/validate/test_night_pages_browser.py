@@ -2,25 +2,14 @@
 
 from __future__ import annotations
 
-import importlib.util
-import sys
 import time
-from pathlib import Path
 
+import night_pages_data as data
 import pytest
 
 from truefall.validate.demo_page import Chapter
 from truefall.validate.demo_page import page as demo_page
 from truefall.validate.nightly.pages import write_pages
-
-_SPEC = importlib.util.spec_from_file_location(
-    "night_pages_data", Path(__file__).with_name("night_pages_data.py")
-)
-assert _SPEC is not None
-data = importlib.util.module_from_spec(_SPEC)
-sys.modules["night_pages_data"] = data
-assert _SPEC.loader is not None
-_SPEC.loader.exec_module(data)
 
 
 @pytest.fixture(scope="module")

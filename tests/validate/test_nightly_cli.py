@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import importlib.util
 import json
 import os
 import re
@@ -14,6 +13,7 @@ from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
+import nightly_parts as parts
 import numpy as np
 import pytest
 
@@ -23,20 +23,6 @@ from truefall.validate.nightly.kept import expected_orbit, kept_folder
 from truefall.validate.nightly.night_file import read_night
 from truefall.validate.nightly.suite import read_suite
 
-
-def _sibling(name: str) -> Any:
-    """A module beside this one, loaded by its file."""
-    if name not in sys.modules:
-        spec = importlib.util.spec_from_file_location(name, Path(__file__).with_name(f"{name}.py"))
-        assert spec is not None
-        assert spec.loader is not None
-        module = importlib.util.module_from_spec(spec)
-        sys.modules[name] = module
-        spec.loader.exec_module(module)
-    return sys.modules[name]
-
-
-parts = _sibling("nightly_parts")
 TRUEFALL = [sys.executable, "-c", "from truefall.validate.cli import main; main()", "nightly"]
 
 

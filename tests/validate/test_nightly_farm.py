@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import importlib.util
 import json
 import multiprocessing
 import os
@@ -17,26 +16,12 @@ from concurrent.futures import Executor, ThreadPoolExecutor
 from pathlib import Path
 from typing import Any
 
+import nightly_parts as parts
 import pytest
 
 from truefall.validate.errors import InputError
 from truefall.validate.nightly.farm import ClusterWorkers, LocalWorkers, run_all
 from truefall.validate.nightly.night_file import read_night
-
-
-def _sibling(name: str) -> Any:
-    """A module beside this one, loaded by its file."""
-    if name not in sys.modules:
-        spec = importlib.util.spec_from_file_location(name, Path(__file__).with_name(f"{name}.py"))
-        assert spec is not None
-        assert spec.loader is not None
-        module = importlib.util.module_from_spec(spec)
-        sys.modules[name] = module
-        spec.loader.exec_module(module)
-    return sys.modules[name]
-
-
-parts = _sibling("nightly_parts")
 
 
 def lost(job: Any, sentence: str) -> tuple[Any, str]:

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import importlib.util
 import json
 import os
 import subprocess
@@ -14,26 +13,12 @@ from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
+import nightly_parts as parts
 import numpy as np
 import pytest
 
 from truefall.validate.nightly.one_case import CaseResult, Job, run_job
 from truefall.validate.nightly.suite import Propagator, read_suite
-
-
-def _sibling(name: str) -> Any:
-    """A module beside this one, loaded by its file."""
-    if name not in sys.modules:
-        spec = importlib.util.spec_from_file_location(name, Path(__file__).with_name(f"{name}.py"))
-        assert spec is not None
-        assert spec.loader is not None
-        module = importlib.util.module_from_spec(spec)
-        sys.modules[name] = module
-        spec.loader.exec_module(module)
-    return sys.modules[name]
-
-
-parts = _sibling("nightly_parts")
 
 C_PROGRAM = """
 #include <math.h>

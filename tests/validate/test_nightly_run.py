@@ -2,18 +2,16 @@
 
 from __future__ import annotations
 
-import importlib.util
 import json
 import os
 import sqlite3
 import stat
 import subprocess
-import sys
 from collections.abc import Callable
 from pathlib import Path
-from typing import Any
 
 import h5py
+import nightly_parts as parts
 import numpy as np
 import pytest
 
@@ -22,21 +20,6 @@ from truefall.validate.errors import InputError, UsageError
 from truefall.validate.nightly.night_file import nights_in, read_night
 from truefall.validate.nightly.record import Night
 from truefall.validate.nightly.run import accept_cases, rebuild
-
-
-def _sibling(name: str) -> Any:
-    """A module beside this one, loaded by its file."""
-    if name not in sys.modules:
-        spec = importlib.util.spec_from_file_location(name, Path(__file__).with_name(f"{name}.py"))
-        assert spec is not None
-        assert spec.loader is not None
-        module = importlib.util.module_from_spec(spec)
-        sys.modules[name] = module
-        spec.loader.exec_module(module)
-    return sys.modules[name]
-
-
-parts = _sibling("nightly_parts")
 
 BODY = parts.BODY
 House = parts.House

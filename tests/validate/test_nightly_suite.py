@@ -2,30 +2,13 @@
 
 from __future__ import annotations
 
-import importlib.util
-import sys
 from pathlib import Path
-from typing import Any
 
+import nightly_parts as parts
 import pytest
 
 from truefall.validate.errors import UsageError
 from truefall.validate.nightly.suite import read_suite
-
-
-def _sibling(name: str) -> Any:
-    """A module beside this one, loaded by its file."""
-    if name not in sys.modules:
-        spec = importlib.util.spec_from_file_location(name, Path(__file__).with_name(f"{name}.py"))
-        assert spec is not None
-        assert spec.loader is not None
-        module = importlib.util.module_from_spec(spec)
-        sys.modules[name] = module
-        spec.loader.exec_module(module)
-    return sys.modules[name]
-
-
-parts = _sibling("nightly_parts")
 
 GOOD = """
 [propagator.ours]

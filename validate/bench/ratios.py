@@ -10,9 +10,7 @@ installed.
 
 from __future__ import annotations
 
-import json
 import os
-import sys
 import time
 from collections.abc import Callable
 from functools import partial
@@ -22,6 +20,7 @@ import numpy as np
 import numpy.typing as npt
 
 from truefall.validate.bench.problems import Problem, Truth, truth_of
+from truefall.validate.benchmarks import best_of, show
 
 __all__ = ["main", "measure"]
 
@@ -31,15 +30,6 @@ Rates = Callable[[float, Floats, Floats], None]
 _PERIOD = 348.2740951  # of p = 10, e = 0.3: the length of the runs, not an expected value
 #: Equations in which everybody is tried: regularised, and plain.
 _EQUATIONS = (("mino", "radius-squared"), ("areal", "proper"))
-
-
-def _best(work: Callable[[], object], repeats: int) -> float:
-    times = []
-    for _ in range(repeats):
-        begin = time.perf_counter()
-        work()
-        times.append(time.perf_counter() - begin)
-    return min(times)
 
 
 class _Subject:
@@ -132,7 +122,7 @@ def _ours(subject: _Subject, goal: float) -> tuple[float, float, str]:
                 tighter = run(small=10.0**-exponent / 3)
                 second = float(np.linalg.norm(tighter.position[1] - exact.position[0]))
                 if max(error, second) <= goal:  # no lucky crossing of zero
-                    seconds = _best(run, 10)
+                    seconds = best_of(run, 10)
                     if seconds < best[0]:
                         best = seconds, error, f"{method}" + (f" of order {order}" if order else "")
                     break
@@ -155,7 +145,7 @@ def _scipy(subject: _Subject, rates: Rates) -> tuple[float, float]:
         )
 
     done = run()
-    return _best(run, 5), subject.error(done.y[:, -1])
+    return best_of(run, 5), subject.error(done.y[:, -1])
 
 
 def _cvode(subject: _Subject, rates: Rates) -> tuple[float, float] | None:
@@ -174,7 +164,7 @@ def _cvode(subject: _Subject, rates: Rates) -> tuple[float, float] | None:
             continue
         error = subject.error(np.asarray(done.y)[-1])
         if best is None or error < best[1]:
-            best = _best(partial(solver.solve, span, subject.start), 5), error
+            best = best_of(partial(solver.solve, span, subject.start), 5), error
     return best
 
 
@@ -212,7 +202,7 @@ def _lsoda(subject: _Subject) -> tuple[float, float] | None:
             continue
         error = subject.error(states[-1])
         if best is None or error < best[1]:
-            best = _best(run, 5), error
+            best = best_of(run, 5), error
     return best
 
 
@@ -303,13 +293,7 @@ def measure(turns: int = 100, orbits: int = 10_000, short: int = 10) -> dict[str
 
 def main() -> None:
     """Measure and print."""
-    figures = measure()
-    if "--json" in sys.argv[1:]:
-        print(json.dumps(figures, indent=1))
-        return
-    wide = max(len(name) for name in figures)
-    for name, value in figures.items():
-        print(f"{name:<{wide}}  {value:>12.4g}")
+    show(measure())
 
 
 if __name__ == "__main__":

@@ -14,6 +14,7 @@ import numpy as np
 
 from truefall.validate.bench.measure import Measured
 from truefall.validate.formats.files import creation_date, producer, replace_file
+from truefall.validate.formats.hdf5_write import ascii_text
 
 if TYPE_CHECKING:
     from truefall.validate.bench.drifts import Drifting
@@ -37,11 +38,6 @@ _NUMBERS = {
 _UNITS = {"tilt": "rad", "seconds": "s"}
 
 
-def _text(value: str) -> np.bytes_:
-    """Fixed-length ASCII with a NUL, as C and Fortran read it."""
-    return np.bytes_(value.encode("ascii", "backslashreplace") + b"\0")
-
-
 def _by_combination(rows: Sequence[Measured]) -> dict[tuple[str, ...], list[Measured]]:
     found: dict[tuple[str, ...], list[Measured]] = defaultdict(list)
     for row in rows:
@@ -62,12 +58,12 @@ def write_set(
         import h5py
 
         with h5py.File(temporary, "w", libver=("v108", "v110")) as file:
-            file.attrs["format"] = _text("truefall-bench")
-            file.attrs["format_version"] = _text("1")
-            file.attrs["producer"] = _text(producer())
-            file.attrs["created"] = _text(creation_date(False))
+            file.attrs["format"] = ascii_text("truefall-bench")
+            file.attrs["format_version"] = ascii_text("1")
+            file.attrs["producer"] = ascii_text(producer())
+            file.attrs["created"] = ascii_text(creation_date(False))
             for key, value in environment.items():
-                file.attrs[key] = _text(value)
+                file.attrs[key] = ascii_text(value)
             for combination, several in _by_combination(rows).items():
                 _put(file.create_group("bench/" + "/".join(combination)), several)
             for drift in drifts:
@@ -78,7 +74,7 @@ def write_set(
 
 def _dataset(group: Any, name: str, values: Any, words: str, unit: str) -> Any:
     dataset = group.create_dataset(name, data=np.asarray(values, dtype="<f8"), track_times=False)
-    dataset.attrs["long_name"], dataset.attrs["units"] = _text(words), _text(unit)
+    dataset.attrs["long_name"], dataset.attrs["units"] = ascii_text(words), ascii_text(unit)
     return dataset
 
 
@@ -86,7 +82,7 @@ def _put(group: Any, several: Sequence[Measured]) -> None:
     words = "tolerance, or number of steps over the run"
     control = _dataset(group, "control", [m.control for m in several], words, "1")
     control.make_scale("control")
-    group.attrs["status"] = _text(", ".join(m.status for m in several))
+    group.attrs["status"] = ascii_text(", ".join(m.status for m in several))
     for name, words in _NUMBERS.items():
         values = [getattr(m, name) for m in several]
         dataset = _dataset(group, name, values, words, _UNITS.get(name, "1"))
@@ -94,7 +90,7 @@ def _put(group: Any, several: Sequence[Measured]) -> None:
 
 
 def _put_drift(group: Any, drift: Drifting) -> None:
-    group.attrs["equations"] = _text(drift.equations)
+    group.attrs["equations"] = ascii_text(drift.equations)
     time = _dataset(group, "time", drift.time, "radial periods since the start", "1")
     time.make_scale("time")
     for name in ("position", "energy"):

@@ -147,7 +147,7 @@ def main(arguments: Sequence[str]) -> int:
             module, _, name = scenario.partition(":")
             try:
                 getattr(importlib.import_module(module), name)()
-            except Exception:
+            except Exception:  # whatever it was is told by the parent; the others still count
                 failures.append((scenario, traceback.format_exc()))
     out.write_bytes(pickle.dumps((store.calls, failures)))
     return 0

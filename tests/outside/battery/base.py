@@ -7,26 +7,12 @@ Rows hold time, position, velocity, second clock, in the case's units.
 
 from __future__ import annotations
 
-import importlib.util
-import sys
-from pathlib import Path
-
 import numpy as np
 
+from battery import propagator as p
 
-def sibling(name):
-    """A module of this folder."""
-    full = f"battery_{name}"
-    if full not in sys.modules:
-        path = Path(__file__).parent / f"{name}.py"
-        spec = importlib.util.spec_from_file_location(full, path)
-        module = importlib.util.module_from_spec(spec)
-        sys.modules[full] = module
-        spec.loader.exec_module(module)
-    return sys.modules[full]
+__all__ = ["FAULTS", "between", "fault", "natural", "p", "unit"]
 
-
-p = sibling("propagator")
 FAULTS = {}
 
 

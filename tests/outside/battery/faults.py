@@ -7,30 +7,14 @@ Rows hold time, position, velocity, second clock, in the case's units.
 
 from __future__ import annotations
 
-import importlib.util
-import sys
 from math import cos, sin, sqrt
-from pathlib import Path
 
 import numpy as np
 
+from battery import numerics  # noqa: F401 - which registers its faults
+from battery.base import FAULTS, between, fault, p, unit
 
-def _base():
-    """The module that all faults share."""
-    name = "battery_base"
-    if name not in sys.modules:
-        path = Path(__file__).parent / "base.py"
-        spec = importlib.util.spec_from_file_location(name, path)
-        module = importlib.util.module_from_spec(spec)
-        sys.modules[name] = module
-        spec.loader.exec_module(module)
-    return sys.modules[name]
-
-
-base = _base()
-p, fault, between, natural, unit = base.p, base.fault, base.between, base.natural, base.unit
-FAULTS = base.FAULTS
-
+__all__ = ["FAULTS", "p"]
 
 # constants --------------------------------------------------------------------------------
 
@@ -304,6 +288,3 @@ def half_step(case, size):
         return None
     late = between(size, 1e-7, 0.02) * case.last / case.count / case.units[2]
     return p.fly(case, start=lambda x, v: (x, v + late * np.array(p.geodesic(case.chart, x, v))))
-
-
-base.sibling("numerics")

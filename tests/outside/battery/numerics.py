@@ -2,29 +2,11 @@
 
 from __future__ import annotations
 
-import importlib.util
-import sys
 from math import cos, pi, sin, sqrt
-from pathlib import Path
 
 import numpy as np
 
-
-def _base():
-    """The module that all faults share."""
-    name = "battery_base"
-    if name not in sys.modules:
-        path = Path(__file__).parent / "base.py"
-        spec = importlib.util.spec_from_file_location(name, path)
-        module = importlib.util.module_from_spec(spec)
-        sys.modules[name] = module
-        spec.loader.exec_module(module)
-    return sys.modules[name]
-
-
-base = _base()
-p, fault, between, natural, unit = base.p, base.fault, base.between, base.natural, base.unit
-
+from battery.base import between, fault, natural, p, unit
 
 # numerics --------------------------------------------------------------------------------
 

@@ -17,8 +17,8 @@ from truefall.validate.causes import explain
 from truefall.validate.check import check_trajectory
 from truefall.validate.trajectory import Trajectory
 
-sys.path.insert(0, str(Path(__file__).parent))
-import faults
+sys.path.insert(0, str(Path(__file__).parent.parent))  # as for the tests: see pyproject.toml
+from battery import faults
 
 
 def judged(case, rows):
